@@ -95,6 +95,8 @@ class Star:
     log_rhk_err: float | None = None
     rotation_period: float | None = None  # d, only if independently known
     rotation_period_err: float | None = None
+    ra_deg: float | None = None  # right ascension, degrees, ICRS
+    dec_deg: float | None = None  # declination, degrees, ICRS
 
 
 @dataclass(frozen=True)
