@@ -1,0 +1,398 @@
+"""What would settle it: nights ranked by what they tell between the live hypotheses."""
+
+from __future__ import annotations
+
+import math
+import os
+import tempfile
+from collections.abc import Sequence
+from dataclasses import dataclass
+from pathlib import Path
+from typing import Any
+
+import numpy as np
+
+from screener.core import Array, Indicator, Orbit, Star
+from screener.system.hypotheses import (
+    Forecast,
+    Hypothesis,
+    Velocities,
+    activity_hypothesis,
+    alias_orbits,
+    bhattacharyya,
+    divergence,
+    forecast,
+    information_deficit,
+    orbit_hypothesis,
+)
+from screener.system.measurements import ExtraMeasurement, extra_measurements
+from screener.system.observability import (
+    NightTimes,
+    find_site,
+    nights_from_data,
+    nights_from_site,
+    site_for,
+)
+
+__all__ = [
+    "THRESHOLD",
+    "Night",
+    "NightPlan",
+    "live_hypotheses",
+    "order_nights",
+    "rank_nights",
+    "write_nights",
+]
+
+THRESHOLD = math.log(100.0)  # natural log-odds at which a question counts as settled
+_MAX_DATA = 400
+_MAX_NIGHTS = 240
+_MAX_SOUGHT = 30
+_MIN_WEIGHT = 1e-3
+
+
+@dataclass(frozen=True)
+class Night:
+    """One night of the plan.
+
+    ``information`` (nat) is what this night alone would tell at least; ``log_odds`` what the nights
+    up to and including this rank are expected to bring, in the less favourable of the two cases
+    (planet true, star true). ``velocity_planet`` and ``velocity_star`` are the predictions, m/s.
+    """
+
+    rank: int
+    time: float
+    information: float
+    log_odds: float
+    velocity_planet: float
+    velocity_star: float
+    altitude: float | None
+    moon_distance: float | None
+    moon_lit: float | None
+
+
+@dataclass(frozen=True)
+class NightPlan:
+    """Ranked nights and what they would achieve.
+
+    ``nights_needed`` is the number of ranked nights whose expected log-odds pass ``threshold``
+    whichever of planet and star is true, None if thirty do not.
+    """
+
+    nights: tuple[Night, ...]
+    nights_needed: int | None
+    threshold: float
+    hypotheses: tuple[tuple[str, float, float], ...]  # name, weight, period
+    extra: tuple[ExtraMeasurement, ...]
+    site: str | None
+    sentence: str
+
+
+def live_hypotheses(
+    data: Velocities, orbit: Orbit, rotation_period: float | None
+) -> tuple[list[Hypothesis], tuple[float, float, float, float]]:
+    """Planet, activity, and the aliases of the planet, with weights that sum to one.
+
+    Star and orbits get a half each; the orbits share theirs by their likelihoods. The second value
+    is the shape of the activity process (amplitude, period, decay time, smoothness).
+    """
+    periods = {orbit.period, 2 * orbit.period}
+    if rotation_period:
+        periods.add(rotation_period)
+    # a process with a turn longer than the data is not rotation
+    usable = sorted(p for p in periods if p < max(float(np.ptp(data.time)), orbit.period * 1.01))
+    star, shape = activity_hypothesis(data, usable or [orbit.period])
+    orbits = [orbit_hypothesis("planet", orbit, data, shape)]
+    for label, alias in zip("AB", alias_orbits(orbit, data), strict=False):
+        orbits.append(orbit_hypothesis(f"alias {label}", alias, data, shape))
+    logs = np.array([o.log_likelihood for o in orbits])
+    share = np.exp(logs - logs.max())
+    # the period that was found stays live: it is the question
+    share[0] = max(share[0], _MIN_WEIGHT)
+    share = 0.5 * share / share.sum()
+    live = [
+        Hypothesis(o.name, float(w), o.covariance, o.period, o.log_likelihood)
+        for o, w in zip(orbits, share, strict=True)
+        if w >= 0.5 * _MIN_WEIGHT
+    ]
+    total = 0.5 + sum(h.weight for h in live)
+    return [
+        Hypothesis(h.name, h.weight / total, h.covariance, h.period, h.log_likelihood)
+        for h in (*live, star)
+    ], shape
+
+
+def order_nights(
+    forecasts: Sequence[Forecast], weights: Array, n_ranked: int
+) -> tuple[list[int], Array]:
+    """Indices of nights, each the one that leaves least unknown given those before it.
+
+    Greedy in the bound of ``information_deficit``; the second value is the information of every
+    night alone (nat), shape (n_nights,).
+    """
+    n_nights = forecasts[0].mean.size
+    chosen: list[int] = []
+    alone = np.zeros(n_nights)
+    for step in range(min(n_ranked, n_nights)):
+        deficit = _deficits(forecasts, weights, chosen)
+        if step == 0:
+            alone = -float(np.sum(weights * np.log(weights))) - deficit
+        deficit[chosen] = np.inf
+        chosen.append(int(np.argmin(deficit)))
+    return chosen, np.maximum(alone, 0.0)
+
+
+def _deficits(forecasts: Sequence[Forecast], weights: Array, chosen: list[int]) -> Array:
+    """What would stay unknown with each night added to those chosen, shape (n_nights,)."""
+    n_nights, n_hyp = forecasts[0].mean.size, len(forecasts)
+    trial = np.array([[*chosen, night] for night in range(n_nights)])
+    # a night that is chosen already would make the matrix singular; it is ruled out afterwards
+    free = np.ones(n_nights, dtype=bool)
+    free[chosen] = False
+    index = trial[free]
+    means = [f.mean[index] for f in forecasts]
+    matrices = [f.covariance[index[:, :, None], index[:, None, :]] for f in forecasts]
+    distances = np.zeros((n_hyp, n_hyp, index.shape[0]))
+    for i in range(n_hyp):
+        for j in range(i):
+            value = bhattacharyya(means[i], matrices[i], means[j], matrices[j])
+            distances[i, j] = distances[j, i] = value
+    result = np.full(n_nights, np.inf)
+    result[free] = information_deficit(weights, distances)
+    return result
+
+
+def _expected_log_odds(
+    planet: Forecast, star: Forecast, chosen: list[int], log_odds: float
+) -> list[float]:
+    """Expected log-odds for the truth after 1, 2, ... nights: the worse of the two truths."""
+    values = []
+    for k in range(1, len(chosen) + 1):
+        rows = np.array(chosen[:k])
+        square = np.ix_(rows, rows)
+        p = (planet.mean[rows], planet.covariance[square])
+        s = (star.mean[rows], star.covariance[square])
+        values.append(min(log_odds + divergence(*p, *s), -log_odds + divergence(*s, *p)))
+    return values
+
+
+def _thin(nights: NightTimes) -> NightTimes:
+    """At most ``_MAX_NIGHTS`` of them, evenly: neighbours tell nearly the same."""
+    rows = np.unique(np.linspace(0, nights.time.size - 1, _MAX_NIGHTS).astype(int))
+    rows = rows[rows < nights.time.size]
+    return NightTimes(
+        nights.time[rows],
+        nights.altitude[rows],
+        nights.moon_distance[rows],
+        nights.moon_lit[rows],
+        nights.sentence,
+    )
+
+
+def rank_nights(
+    star: Star,
+    time: Array,
+    rv: Array,
+    sd: Array,
+    orbit: Orbit,
+    *,
+    rotation_period: float | None = None,
+    site: str | None = None,
+    start: float | None = None,
+    days: int = 365,
+    n_ranked: int = 10,
+    log_odds: float = 0.0,
+    threshold: float = THRESHOLD,
+    indicators: Sequence[Indicator] = (),
+) -> NightPlan:
+    """Nights of the coming year, ranked by what they tell between the live hypotheses.
+
+    Parameters
+    ----------
+    star : Star
+        With ``ra_deg`` and ``dec_deg`` the nights come from the sky, without from the seasons seen
+        in the data.
+    time, rv, sd : Array, shape (n_obs,)
+        Days (BJD), velocities less all other orbits and zero points, total white noise.
+    orbit : Orbit
+        The signal in question.
+    rotation_period : float, optional
+        Of the star, d.
+    site : str, optional
+        Name or "latitude,longitude[,height]"; a large observatory of the right hemisphere if
+        absent.
+    start : float, optional
+        JD from which nights count; the last velocity if absent, so that a rerun gives the same.
+    days, n_ranked : int
+        Length of the search and of the list.
+    log_odds : float
+        Natural log-odds of planet against star so far.
+    threshold : float
+        Log-odds at which the question counts as settled.
+    indicators : sequence of Indicator
+        Those measured with the velocities, for judging what an indicator would add.
+
+    Raises
+    ------
+    InputFault
+        Where the site is unknown.
+    """
+    order = np.argsort(time)
+    everything = Velocities(time[order], rv[order], sd[order])
+    begin = float(everything.time[-1]) if start is None else start
+    name: str | None = None
+    if star.ra_deg is not None and star.dec_deg is not None:
+        place = find_site(site) if site else site_for(star)
+        name = place.name
+        nights = nights_from_site(star, place, begin, days)
+    else:
+        if site:
+            find_site(site)  # a wrong name is told even where it does not matter
+        nights = nights_from_data(everything.time, begin, days)
+    if nights.time.size == 0:
+        return NightPlan(
+            (), None, threshold, (), (), name, "No usable night: the star never stands well."
+        )
+    nights = _thin(nights)
+    data = everything.latest(_MAX_DATA)
+    hypotheses, shape = live_hypotheses(data, orbit, rotation_period)
+    new_sd = np.full(nights.time.size, float(np.median(data.sd)))
+    forecasts = [forecast(h, data, nights.time, new_sd) for h in hypotheses]
+    weights = np.array([h.weight for h in hypotheses])
+    chosen, alone = order_nights(forecasts, weights, max(n_ranked, _MAX_SOUGHT))
+    gains = _expected_log_odds(forecasts[0], forecasts[-1], chosen, log_odds)
+    needed = next((k + 1 for k, g in enumerate(gains) if g >= threshold), None)
+    table = tuple(
+        Night(
+            rank=k + 1,
+            time=float(nights.time[i]),
+            information=float(alone[i]),
+            log_odds=gains[k],
+            velocity_planet=float(forecasts[0].mean[i]),
+            velocity_star=float(forecasts[-1].mean[i]),
+            altitude=_known(nights.altitude[i]),
+            moon_distance=_known(nights.moon_distance[i]),
+            moon_lit=_known(nights.moon_lit[i]),
+        )
+        for k, i in enumerate(chosen[:n_ranked])
+    )
+    per_night = gains[len(table) - 1] / len(table)
+    extra = extra_measurements(
+        star, everything, orbit, per_night, indicators, rotation_period=rotation_period
+    )
+    return NightPlan(
+        nights=table,
+        nights_needed=needed,
+        threshold=threshold,
+        hypotheses=tuple((h.name, h.weight, h.period) for h in hypotheses),
+        extra=extra,
+        site=name,
+        sentence=_summary(nights.sentence, len(table), gains, needed, extra, shape),
+    )
+
+
+def _known(value: float) -> float | None:
+    return float(value) if math.isfinite(value) else None
+
+
+def _summary(
+    where: str,
+    n: int,
+    gains: list[float],
+    needed: int | None,
+    extra: Sequence[ExtraMeasurement],
+    shape: tuple[float, float, float, float],
+) -> str:
+    if needed is None:
+        text = (
+            f"{len(gains)} velocities of the coming year are not expected to settle it "
+            f"(log-odds {gains[-1]:.1f})."
+        )
+    else:
+        text = f"{needed} well-chosen nights are expected to settle it."
+    text += (
+        f" The best {n} bring log-odds of {gains[n - 1]:.1f} against a star whose pattern recurs "
+        f"after {shape[1]:.3g} d and lasts {shape[2]:.0f} d."
+    )
+    better = [e for e in extra if e.worth > 1.2]
+    if better:
+        text += f" Worth more than a velocity: {better[0].name}."
+    return f"{text} {where}"
+
+
+def write_nights(path: Path, plan: NightPlan) -> None:
+    """Write the plan as ECSV: one row a night, units in the header; write, then rename."""
+    from astropy import units as u
+    from astropy.table import Table
+
+    def column(name: str) -> list[float]:
+        values = [getattr(n, name) for n in plan.nights]
+        return [math.nan if v is None else float(v) for v in values]
+
+    table = Table()
+    table["rank"] = [n.rank for n in plan.nights]
+    table["time"] = np.array(column("time")) * u.d
+    table["date"] = [_date(n.time) for n in plan.nights]
+    table["information"] = column("information")
+    table["log_odds"] = column("log_odds")
+    for name in ("velocity_planet", "velocity_star"):
+        table[name] = np.array(column(name)) * u.m / u.s
+    for name in ("altitude", "moon_distance"):
+        table[name] = np.array(column(name)) * u.deg
+    table["moon_lit"] = column("moon_lit")
+    table.meta["site"] = plan.site or "unknown"
+    table.meta["summary"] = plan.sentence
+    handle, temporary = tempfile.mkstemp(dir=path.parent, suffix=".ecsv")
+    os.close(handle)
+    try:
+        table.write(temporary, format="ascii.ecsv", overwrite=True)
+        Path(temporary).chmod(0o644)
+        Path(temporary).replace(path)
+    finally:
+        Path(temporary).unlink(missing_ok=True)
+
+
+def _date(julian_date: float) -> str:
+    """Calendar date (UTC) of a Julian date."""
+    import datetime
+
+    moment = datetime.datetime(2000, 1, 1, 12) + datetime.timedelta(days=julian_date - 2451545.0)
+    return moment.strftime("%Y-%m-%d")
+
+
+def plan_as_dict(plan: NightPlan) -> dict[str, Any]:
+    """The plan for JSON, units in the keys."""
+    return {
+        "nights": [
+            {
+                "rank": n.rank,
+                "time_bjd_d": n.time,
+                "date": _date(n.time),
+                "information_nat": n.information,
+                "log_odds_so_far": n.log_odds,
+                "velocity_planet_m_s": n.velocity_planet,
+                "velocity_star_m_s": n.velocity_star,
+                "altitude_deg": n.altitude,
+                "moon_distance_deg": n.moon_distance,
+                "moon_lit": n.moon_lit,
+            }
+            for n in plan.nights
+        ],
+        "nights_needed": plan.nights_needed,
+        "log_odds_threshold": plan.threshold,
+        "hypotheses": [
+            {"name": name, "weight": weight, "period_d": period}
+            for name, weight, period in plan.hypotheses
+        ],
+        "extra_measurements": [
+            {
+                "name": e.name,
+                "log_odds_per_night": e.log_odds,
+                "worth_velocities": e.worth,
+                "sentence": e.sentence,
+            }
+            for e in plan.extra
+        ],
+        "site": plan.site,
+        "sentence": plan.sentence,
+    }
