@@ -1,0 +1,143 @@
+"""Marking of outliers: cautious with velocities, because planets make far values too.
+
+A velocity is marked only if it stands alone: it lies far from its neighbours in time *and* outside
+the range in which nearly all velocities of its instrument lie, no other exposure of the same
+night and no neighbour on the flank agrees with it, and no second far velocity resembles it. Hot
+Jupiters fail the second test, passages through periastron of eccentric orbits the later ones.
+What is far but not alone is kept and said.
+"""
+
+from __future__ import annotations
+
+import numpy as np
+from numpy.typing import NDArray
+
+from screener.core import Array, IntArray
+from screener.intake.checks import robust_scatter
+
+__all__ = ["FAR", "far_indicator_values", "isolated_velocities", "odd_exposures"]
+
+FAR = 8.0  # robust scatters
+_GLOBAL = 5.0
+_FLANK_D = 10.0
+_MIN_POINTS = 12
+
+
+def _local_residuals(value: Array, half: int = 3) -> Array:
+    """Each value less the median of its (up to six) neighbours in time."""
+    out = np.full(value.size, np.nan)
+    for i in range(value.size):
+        low, high = max(0, i - half), min(value.size, i + half + 1)
+        around = np.concatenate([value[low:i], value[i + 1 : high]])
+        out[i] = value[i] - np.median(around)
+    return out
+
+
+def _deviations(value: Array, error: Array) -> tuple[Array, NDArray[np.bool_]]:
+    """Local deviation in units of the robust scatter, and where it is far in both senses."""
+    residual = _local_residuals(value)
+    local = 1.4826 * float(np.median(np.abs(residual)))
+    deviation = residual / np.sqrt(local**2 + error**2)
+    spread = np.sqrt(robust_scatter(value) ** 2 + error**2)
+    far = (np.abs(deviation) > FAR) & (np.abs(value - np.median(value)) > _GLOBAL * spread)
+    return deviation, far
+
+
+def isolated_velocities(
+    time: Array, rv: Array, rv_err: Array, instrument: IntArray
+) -> tuple[NDArray[np.bool_], Array, int]:
+    """Velocities (sorted by time) that stand alone.
+
+    Returns
+    -------
+    marked : array of bool, shape (n_obs,)
+    deviation : Array, shape (n_obs,)
+        In units of the robust scatter about the neighbours; NaN for instruments with fewer than
+        12 velocities, of which none is ever marked.
+    n_kept : int
+        How many are far but not alone, and were kept.
+    """
+    marked = np.zeros(time.size, dtype=bool)
+    deviation = np.full(time.size, np.nan)
+    kept = 0
+    for k in np.unique(instrument):
+        mine = np.flatnonzero(instrument == k)
+        if mine.size < _MIN_POINTS:
+            continue
+        d, far = _deviations(rv[mine], rv_err[mine])
+        deviation[mine] = d
+        alone = far & ~_supported(time[mine], d) & ~_alike(d, far)
+        if np.count_nonzero(alone) > max(2, 0.02 * mine.size):
+            alone[:] = False
+        marked[mine[alone]] = True
+        kept += int(np.count_nonzero(far & ~alone))
+    return marked, deviation, kept
+
+
+def _supported(time: Array, deviation: Array) -> NDArray[np.bool_]:
+    """Whether a neighbour within ten days deviates to the same side by three scatters or more."""
+    out = np.zeros(time.size, dtype=bool)
+    for i in np.flatnonzero(np.abs(deviation) > FAR):
+        near = np.abs(time - time[i]) <= _FLANK_D
+        near[i] = False
+        out[i] = bool(np.any(near & (deviation * np.sign(deviation[i]) > 3.0)))
+    return out
+
+
+def _alike(deviation: Array, far: NDArray[np.bool_]) -> NDArray[np.bool_]:
+    """Whether another far one deviates to the same side by a similar amount (factor 2.5)."""
+    out = np.zeros(deviation.size, dtype=bool)
+    index = np.flatnonzero(far)
+    for i in index:
+        for j in index:
+            if i != j and deviation[i] * deviation[j] > 0:
+                ratio = abs(deviation[i] / deviation[j])
+                out[i] |= bool(0.4 < ratio < 2.5)
+    return out
+
+
+def far_indicator_values(
+    value: Array, error: Array, instrument: IntArray
+) -> tuple[NDArray[np.bool_], Array]:
+    """Indicator values far from their neighbours and from the rest of their instrument.
+
+    Unlike velocities they need no period kept, so a whole night may go; but if more than 5 % are
+    far, the tail belongs to the star and none is marked. NaN values are skipped.
+    """
+    marked = np.zeros(value.size, dtype=bool)
+    deviation = np.full(value.size, np.nan)
+    for k in np.unique(instrument):
+        mine = np.flatnonzero((instrument == k) & np.isfinite(value) & np.isfinite(error))
+        if mine.size < _MIN_POINTS:
+            continue
+        d, far = _deviations(value[mine], error[mine])
+        deviation[mine] = d
+        if np.count_nonzero(far) <= max(1, 0.05 * mine.size):
+            marked[mine[far]] = True
+    return marked, deviation
+
+
+def odd_exposures(value: Array, error: Array, bins: IntArray) -> tuple[NDArray[np.bool_], Array]:
+    """Exposures that disagree with the others of their bin (three or more), shape (n_obs,).
+
+    The yardstick is the exposure's error and the scatter inside bins, pooled over all bins.
+    """
+    marked = np.zeros(value.size, dtype=bool)
+    deviation = np.full(value.size, np.nan)
+    groups = [np.flatnonzero((bins == b) & np.isfinite(value)) for b in np.unique(bins)]
+    groups = [g for g in groups if g.size >= 3]
+    if not groups:
+        return marked, deviation
+    inside = np.concatenate([value[g] - np.median(value[g]) for g in groups])
+    # a median of few points hugs them: n = 3 has one deviation of zero, so use the nonzero ones
+    nonzero = np.abs(inside[inside != 0.0])
+    pooled = 1.4826 * float(np.median(nonzero)) if nonzero.size else 0.0
+    for g in groups:
+        others = np.array([np.median(np.delete(value[g], i)) for i in range(g.size)])
+        scale = np.sqrt(pooled**2 + np.nan_to_num(error[g]) ** 2)
+        d = (value[g] - others) / np.where(scale > 0.0, scale, np.inf)
+        deviation[g] = d
+        far = np.abs(d) > FAR
+        if np.count_nonzero(far) <= g.size // 3:
+            marked[g[far]] = True
+    return marked, deviation
