@@ -82,7 +82,12 @@ def locate(raw: RawTable, key: ColumnKey) -> int | None:
 
 
 def find_column(
-    raw: RawTable, sidecar: Sidecar, name: str, required: bool, faults: FaultList
+    raw: RawTable,
+    sidecar: Sidecar,
+    name: str,
+    required: bool,
+    faults: FaultList,
+    messages: list[str],
 ) -> int | None:
     """Index of the column for one of our names; a fault if it is required or named but absent."""
     named = sidecar.columns.get(name)
@@ -91,6 +96,8 @@ def find_column(
         _absent(raw, name, named, faults)
     elif index is None and required:
         _lacking(raw, name, faults)
+    elif index is not None and named is None and raw.names[index] != name:
+        messages.append(f"Column '{raw.names[index]}' was read as '{name}'.")
     return index
 
 
@@ -187,7 +194,7 @@ def extract(raw: RawTable, sidecar: Sidecar, faults: FaultList) -> Columns:
     messages = list(raw.remarks)
 
     def take(name: str, required: bool, parent: Column | None = None) -> Column | None:
-        index = find_column(raw, sidecar, name, required, faults)
+        index = find_column(raw, sidecar, name, required, faults, messages)
         return (
             None if index is None else _column(raw, sidecar, name, index, faults, messages, parent)
         )
@@ -346,7 +353,7 @@ def _labels(
     raw: RawTable, sidecar: Sidecar, faults: FaultList, messages: list[str]
 ) -> NDArray[Any]:
     """Instrument label of each row; "unlabelled" for blanks, one label when there is no column."""
-    index = find_column(raw, sidecar, "instrument", False, faults)
+    index = find_column(raw, sidecar, "instrument", False, faults, messages)
     if index is None:
         return np.full(raw.n_rows, "instrument", dtype=object)
     cells = raw.columns[index]

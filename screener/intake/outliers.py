@@ -101,8 +101,9 @@ def far_indicator_values(
 ) -> tuple[NDArray[np.bool_], Array]:
     """Indicator values far from their neighbours and from the rest of their instrument.
 
-    Unlike velocities they need no period kept, so a whole night may go; but if more than 5 % are
-    far, the tail belongs to the star and none is marked. NaN values are skipped.
+    Unlike velocities they need no period kept, so a whole night may go (a spectrum reduced with
+    another star's mask, say). If more than 5 % are far, only those twice as far go; if these are
+    more than 15 %, the tail belongs to the star and none is marked. NaN values are skipped.
     """
     marked = np.zeros(value.size, dtype=bool)
     deviation = np.full(value.size, np.nan)
@@ -112,8 +113,11 @@ def far_indicator_values(
             continue
         d, far = _deviations(value[mine], error[mine])
         deviation[mine] = d
-        if np.count_nonzero(far) <= max(1, 0.05 * mine.size):
-            marked[mine[far]] = True
+        for limit, share in ((FAR, 0.05), (2.0 * FAR, 0.15)):
+            beyond = far & (np.abs(d) > limit)
+            if np.count_nonzero(beyond) <= max(1, share * mine.size):
+                marked[mine[beyond]] = True
+                break
     return marked, deviation
 
 

@@ -31,7 +31,8 @@ from screener.intake.indicators import CleanIndicator, clean_indicator, with_err
 from screener.intake.photometry import read_photometry
 from screener.intake.raw import RawTable
 from screener.intake.reduce import reduce_exposures
-from screener.intake.sidecar import Sidecar, read_sidecar
+from screener.intake.sidecar import Sidecar
+from screener.intake.sidecar_reader import read_sidecar
 from screener.intake.tables import read_table
 
 __all__ = ["MAX_ROWS", "Source", "observe", "open_table", "star_sidecar"]
