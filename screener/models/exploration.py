@@ -1,0 +1,199 @@
+"""Finding the signals: in white noise and on top of the activity model, then both together.
+
+The two searches miss different planets, so that both feed one list. Signals enter the activity
+model one by one while the next is significant; each fit starts from its neighbours' solutions, so
+that a model with one more orbit is never worse than the model without.
+"""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Sequence
+from dataclasses import dataclass
+
+import numpy as np
+
+from screener.core import Array, Depth, KnownPlanet, TimeSeries
+from screener.models.fitting import Fit
+from screener.models.joint import OrbitTerm
+from screener.models.noise import NoiseModel
+from screener.search.false_alarm import analytic, effective_baseline, gain_with_free_scale
+from screener.search.periodogram import Peak, frequency_grid, peaks, power
+
+__all__ = ["Found", "Search", "same_period", "search_activity", "search_white", "usable"]
+
+MOST_SIGNALS = 6
+_ACCEPT = 0.01  # false-alarm probability below which a signal enters the list
+_ECCENTRIC_GAIN = 5.0  # what two more parameters must bring
+_STRONG = 40.0  # gain above which an orbit's shape can be told
+_NEAR_BEST = 6.0  # aliases this close to the highest peak are tried as well
+
+
+@dataclass(frozen=True)
+class Found:
+    """A signal and the search that found it."""
+
+    term: OrbitTerm
+    false_alarm_probability: float
+    found_by: str
+
+
+@dataclass(frozen=True, eq=False)
+class Search:
+    """Outcome of one search: the signals, the fit with all, and the traces for figures."""
+
+    found: tuple[Found, ...]
+    fit: Fit
+    fits: tuple[Fit, ...]  # with 0, 1, 2, ... of the signals
+    frequency: Array
+    gains: tuple[Array, ...]  # periodogram on top of each of ``fits``
+    bandwidth: float
+    baseline: float  # effective, d
+
+
+def same_period(first: float, second: float, baseline: float) -> bool:
+    """Whether two periods cannot be told apart over the baseline."""
+    return abs(1 / first - 1 / second) < 1 / baseline
+
+
+def usable(frequency: Array, baseline: float) -> Array:
+    """Where a search may look: not within the resolution of one or two cycles per day.
+
+    Nightly sampling turns slow drifts into periods of a day; nothing there can be told from them.
+    """
+    width = max(1.5 / baseline, 0.004)
+    keep = np.ones(frequency.size, dtype=bool)
+    for day in (1.0, 1.0027379):
+        keep &= np.abs(frequency - day) > width
+    return keep
+
+
+def _best_peak(
+    noise: NoiseModel, result: Fit, terms: Sequence[OrbitTerm], candidates: Sequence[Peak]
+) -> tuple[OrbitTerm, Fit]:
+    """Refit each of the candidate frequencies and keep the best."""
+    trials = []
+    for peak in candidates:
+        term = noise.term(1 / peak.frequency)
+        trials.append((noise.fit([*terms, term], near=[result]), term))
+    best, term = max(trials, key=lambda pair: pair[0].objective)
+    return term, best
+
+
+def _shape(noise: NoiseModel, terms: list[OrbitTerm], result: Fit) -> tuple[list[OrbitTerm], Fit]:
+    """Let strong orbits be eccentric where that pays."""
+    for i, term in enumerate(terms):
+        if term.eccentric:
+            continue
+        orbit = noise.orbits(result)[i]
+        error = orbit.semi_amplitude_err or math.inf
+        if 0.25 * (orbit.semi_amplitude / error) ** 2 < _STRONG:
+            continue
+        trial = [*terms]
+        trial[i] = OrbitTerm(term.period, term.amplitude_sd, True)
+        model_fit = noise.fit(trial, near=[result])
+        for angle in (2.1, 4.2):  # the periastron may lie anywhere
+            start = noise.transfer(noise.model(trial), result)
+            at = model_fit.model.slices["orbits"].start + sum(t.n_parameters for t in trial[:i])
+            start[at + 1 : at + 3] = 0.4 * np.array([math.cos(angle), math.sin(angle)])
+            model_fit = noise.improve(trial, start)
+        if model_fit.objective > result.objective + _ECCENTRIC_GAIN:
+            terms, result = trial, model_fit
+    return terms, result
+
+
+def _known_terms(noise: NoiseModel, known: Sequence[KnownPlanet]) -> list[OrbitTerm]:
+    return [noise.term(planet.period, eccentric=False) for planet in known]
+
+
+def search_white(
+    series: TimeSeries,
+    noise: NoiseModel,
+    known: Sequence[KnownPlanet],
+    depth: Depth,
+    forced: Sequence[float] = (),
+) -> Search:
+    """Signals one by one in white noise, each time refining all orbits together."""
+    return _search(series, noise, known, depth, forced, (), "white noise")
+
+
+def search_activity(
+    series: TimeSeries,
+    noise: NoiseModel,
+    known: Sequence[KnownPlanet],
+    depth: Depth,
+    hints: Sequence[float],
+) -> Search:
+    """Signals one by one on top of the activity model; ``hints`` (periods) are tried as well."""
+    return _search(series, noise, known, depth, (), hints, "activity model")
+
+
+def _search(
+    series: TimeSeries,
+    noise: NoiseModel,
+    known: Sequence[KnownPlanet],
+    depth: Depth,
+    forced: Sequence[float],
+    hints: Sequence[float],
+    name: str,
+) -> Search:
+    oversampling = 4.0 if depth is Depth.QUICK or series.baseline > 4000 else 6.0
+    grid = frequency_grid(series.baseline, oversampling)
+    grid = grid[usable(grid, series.baseline)]
+    bandwidth = float(grid[-1] - grid[0])
+    span = effective_baseline(series.time, 1 / series.rv_err**2)
+    white = noise.kernel is None
+    terms = _known_terms(noise, known) + [noise.term(p) for p in forced]
+    found = [Found(t, 0.0, "user") for t in terms[len(known) :]]
+    result = noise.fit(terms, fresh=True)
+    fits, gains = [result], []
+    while True:
+        gain = power(series.time, noise.precision(result), grid)
+        if white:
+            n_free = series.n_obs - result.model.data.columns.shape[2] - 2 * len(terms)
+            gain = gain_with_free_scale(gain, float(max(n_free, 2)), max(n_free, 2))
+        gains.append(gain)
+        if len(found) >= MOST_SIGNALS or series.n_obs < 10 + 5 * len(terms):
+            break
+        tops = peaks(grid, gain, 3, series.baseline)
+        if not tops:
+            break
+        tops = [p for p in tops if p.power > tops[0].power - _NEAR_BEST]
+        tops += _hinted(grid, gain, hints, tops, terms, series.baseline)
+        term, better = _best_peak(noise, result, terms, tops)
+        # the refit gain counts where it is smaller: peaks on a poor optimum look higher
+        reached = max(p.power for p in tops)
+        if not white:
+            reached = max(reached, min(better.profile - result.profile, reached + 10))
+        probability = analytic(reached, bandwidth, span)
+        if probability > _ACCEPT:
+            break
+        found.append(Found(term, probability, name))
+        terms, result = _shape(noise, [*terms, term], better)
+        found = [
+            Found(t, f.false_alarm_probability, f.found_by)
+            for t, f in zip(terms[len(known) :], found, strict=True)
+        ]
+        fits.append(result)
+    return Search(tuple(found), result, tuple(fits), grid, tuple(gains), bandwidth, span)
+
+
+def _hinted(
+    grid: Array,
+    gain: Array,
+    hints: Sequence[float],
+    tops: Sequence[Peak],
+    terms: Sequence[OrbitTerm],
+    baseline: float,
+) -> list[Peak]:
+    """Peaks at the periods another search found, where this one has some power too."""
+    out = []
+    for period in hints:
+        near = np.flatnonzero(np.abs(grid - 1 / period) < 0.5 / baseline)
+        taken = [1 / p.frequency for p in tops] + [t.period for t in terms]
+        if near.size == 0 or any(same_period(period, other, baseline) for other in taken):
+            continue
+        best = near[np.argmax(gain[near])]
+        if gain[best] > tops[0].power - 2 * _NEAR_BEST and gain[best] > 6:
+            out.append(Peak(float(grid[best]), float(gain[best])))
+    return out
