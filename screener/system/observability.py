@@ -147,11 +147,20 @@ def nights_from_site(star: Star, site: Site, start: float, days: int) -> NightTi
         moments = Time(grid.ravel(), format="jd", scale="utc")
         frame = AltAz(obstime=moments, location=place)
         high = np.asarray(target.transform_to(frame).alt.deg).reshape(grid.shape)
-        sun = np.asarray(get_sun(moments).transform_to(frame).alt.deg).reshape(grid.shape)
+        # the Sun moves by less than 0.4 deg in half a night: its place at midnight will do
+        sun_place = get_sun(Time(midnight, format="jd", scale="utc"))
+        sun_sky = SkyCoord(
+            np.repeat(sun_place.ra.deg, steps.size) * u.deg,
+            np.repeat(sun_place.dec.deg, steps.size) * u.deg,
+        )
+        sun = np.asarray(sun_sky.transform_to(frame).alt.deg).reshape(grid.shape)
         usable = (sun < _SUN_BELOW) & (grid >= start)
         high = np.where(usable, high, -90.0)
         best = np.argmax(high, axis=1)
         rows = np.flatnonzero(high[np.arange(best.size), best] > _STAR_ABOVE)
+        where = f"Nights at {site.name}: Sun below -18 deg, star above 30 deg, away from the Moon."
+        if rows.size == 0:
+            return NightTimes(*(np.zeros(0) for _ in range(4)), where)
         time, altitude = grid[rows, best[rows]], high[rows, best[rows]]
         chosen = Time(time, format="jd", scale="utc")
         moon = get_body("moon", chosen, place)
@@ -163,13 +172,7 @@ def nights_from_site(star: Star, site: Site, start: float, days: int) -> NightTi
     elongation = np.arccos(np.clip(np.sum(moon_at * sun_at, axis=1), -1, 1))
     lit = 0.5 * (1 - np.cos(elongation))
     keep = ~((apart < _MOON_APART) & (lit > 1 / 3))
-    return NightTimes(
-        time[keep],
-        altitude[keep],
-        apart[keep],
-        lit[keep],
-        f"Nights at {site.name}: Sun below -18 deg, star above 30 deg, away from the Moon.",
-    )
+    return NightTimes(time[keep], altitude[keep], apart[keep], lit[keep], where)
 
 
 def nights_from_data(times: Array, start: float, days: int) -> NightTimes:
