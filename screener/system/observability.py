@@ -160,7 +160,8 @@ def nights_from_site(star: Star, site: Site, start: float, days: int) -> NightTi
         rows = np.flatnonzero(high[np.arange(best.size), best] > _STAR_ABOVE)
         where = f"Nights at {site.name}: Sun below -18 deg, star above 30 deg, away from the Moon."
         if rows.size == 0:
-            return NightTimes(*(np.zeros(0) for _ in range(4)), where)
+            none = np.zeros(0)
+            return NightTimes(none, none, none, none, where)
         time, altitude = grid[rows, best[rows]], high[rows, best[rows]]
         chosen = Time(time, format="jd", scale="utc")
         moon = get_body("moon", chosen, place)

@@ -1,4 +1,4 @@
-"""Crossing orbits, Hill and AMD criteria, and period ratios, on the solar system and made-up pairs."""
+"""Crossing orbits, Hill and AMD criteria, period ratios: the solar system and made-up pairs."""
 
 from __future__ import annotations
 
