@@ -92,7 +92,9 @@ def check_time(
                 else ""
             )
             + f" ({_several(count)})",
-            _time_cure(column, float(value), count, int(usable.size)),
+            "It is one without: remove [time] offset_d from the sidecar."
+            if sidecar.time_offset and EARLIEST <= value <= LATEST
+            else _time_cure(column, float(value), count, int(usable.size)),
         )
         return None
     if np.ptp(usable) == 0.0:

@@ -141,7 +141,8 @@ def _is_units_row(cells: list[str], n_columns: int) -> bool:
     if len(cells) != n_columns:
         return False
     filled = [c for c in cells if c]
-    if not filled or any(is_number(c) for c in filled):
+    # "2458000,5" and "12:30" are no plain numbers, yet astropy would take some for units
+    if not filled or any(c.lstrip("+-.")[:1].isdigit() for c in filled):
         return False
     return sum(is_unit(c) for c in filled) > 0.5 * len(filled)
 

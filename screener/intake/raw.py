@@ -60,7 +60,8 @@ def from_astropy(
         values, is_odd = _plain(column, len(table))
         if is_odd:
             odd.add(name)
-        if getattr(column, "dtype", None) in (np.float32, np.float16):
+        dtype = getattr(column, "dtype", None)  # of either byte order
+        if dtype is not None and dtype.kind == "f" and dtype.itemsize < 8:
             coarse.add(name)
         columns.append(values)
         unit_texts.append(unit)
