@@ -2,7 +2,7 @@
 
 A velocity is marked only if it stands alone: it lies far from its neighbours in time *and* outside
 the range in which nearly all velocities of its instrument lie, no other exposure of the same
-night and no neighbour on the flank agrees with it, and no second far velocity resembles it. Hot
+night and no neighbour on the flank agrees with it, and no other velocity is nearly as far. Hot
 Jupiters fail the second test, passages through periastron of eccentric orbits the later ones.
 What is far but not alone is kept and said.
 """
@@ -85,14 +85,14 @@ def _supported(time: Array, deviation: Array) -> NDArray[np.bool_]:
 
 
 def _alike(deviation: Array, far: NDArray[np.bool_]) -> NDArray[np.bool_]:
-    """Whether another far one deviates to the same side by a similar amount (factor 2.5)."""
+    """Whether another one deviates to the same side by at least 40 % as much.
+
+    A glitch stands off from the rest; the largest of a tail, as eccentric orbits make it, does not.
+    """
     out = np.zeros(deviation.size, dtype=bool)
-    index = np.flatnonzero(far)
-    for i in index:
-        for j in index:
-            if i != j and deviation[i] * deviation[j] > 0:
-                ratio = abs(deviation[i] / deviation[j])
-                out[i] |= bool(0.4 < ratio < 2.5)
+    for i in np.flatnonzero(far):
+        along = deviation * np.sign(deviation[i])
+        out[i] = np.count_nonzero(along >= 0.4 * along[i]) > 1
     return out
 
 
