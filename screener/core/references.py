@@ -57,7 +57,7 @@ class Reference:
     @property
     def short(self) -> str:
         """Author and year as in running text: "Haywood et al. (2014)"."""
-        names = [name.split(",")[0] for name in self.authors.split(" and ")]
+        names = [name.split(",")[0].strip("{}") for name in self.authors.split(" and ")]
         if len(names) > 3 or names[-1] == "others":
             return f"{names[0]} et al. ({self.year})"
         if len(names) == 1:

@@ -8,7 +8,9 @@ from __future__ import annotations
 
 import io
 import re
-from collections.abc import Callable, Iterable
+import warnings
+from collections.abc import Callable, Iterable, Iterator
+from contextlib import contextmanager
 from dataclasses import dataclass
 from pathlib import Path
 
@@ -19,6 +21,7 @@ from matplotlib.figure import Figure, FigureBase
 from screener.core import Screening
 from screener.report.files import write_bytes
 from screener.report.fold import draw_fold
+from screener.report.limits import draw_limits, limit_curve
 from screener.report.panels import (
     activity_height,
     draw_activity,
@@ -31,7 +34,15 @@ from screener.report.panels import (
 from screener.report.style import LIGHT
 from screener.report.words import amplitude, number, period
 
-__all__ = ["FORMATS", "FigureSpec", "figure_bytes", "figure_specs", "inline_svg", "write_figures"]
+__all__ = [
+    "FORMATS",
+    "drawing_style",
+    "FigureSpec",
+    "figure_bytes",
+    "figure_specs",
+    "inline_svg",
+    "write_figures",
+]
 
 FORMATS = ("png", "svg", "pdf")
 WIDTH = 6.3  # inches; the text block of a page
@@ -108,6 +119,8 @@ def figure_specs(screening: Screening) -> tuple[FigureSpec, ...]:
         specs.append(_activity(screening))
     if screening.products.series.indicators:
         specs.append(_indicators(screening))
+    if limit_curve(screening.verdict.system) is not None:
+        specs.append(_limits(screening))
     return tuple(specs)
 
 
@@ -222,8 +235,34 @@ def _indicators(screening: Screening) -> FigureSpec:
     )
 
 
+def _limits(screening: Screening) -> FigureSpec:
+    return FigureSpec(
+        "limits",
+        "What would have been found",
+        WIDTH,
+        2.9,
+        lambda fig: draw_limits(fig, screening),
+        "Semi-amplitude of a circular orbit that the search would have found at half, nine tenths "
+        "and 99 % of the phases, against period; points are the signals. In the shaded part a "
+        "planet may hide.",
+        "a point well above the curves: it was found with room to spare.",
+        "nothing of its own here; a point close to the curves is a weak detection, whatever "
+        "made it.",
+        f"Detection limits of {screening.verdict.star.name}: semi-amplitude against period.",
+    )
+
+
 def _safe(text: str) -> str:
     return re.sub(r"[^A-Za-z0-9-]", "_", text)[:40]
+
+
+@contextmanager
+def drawing_style() -> Iterator[None]:
+    """Our settings of matplotlib, for the time of a drawing."""
+    with matplotlib.rc_context(_RC), warnings.catch_warnings():
+        # a name in a script that our font lacks shows boxes; that is no reason to stop or to talk
+        warnings.filterwarnings("ignore", message="Glyph .* missing")
+        yield
 
 
 def _drawn(spec: FigureSpec) -> Figure:
@@ -248,7 +287,7 @@ def figure_bytes(spec: FigureSpec, formats: Iterable[str]) -> dict[str, bytes]:
     result = {}
     # no dates in the files: the same verdict gives the same bytes
     dates = {"png": None, "svg": {"Date": None}, "pdf": {"CreationDate": None}}
-    with matplotlib.rc_context(_RC):
+    with drawing_style():
         figure = _drawn(spec)
         for kind in formats:
             stream = io.BytesIO()

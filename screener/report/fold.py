@@ -102,7 +102,7 @@ def block_amplitudes(orbit: Orbit, fold: Fold, error: Array) -> tuple[Block, lis
     Blocks are observing seasons (a break of 60 d ends one), joined until each covers seven tenths
     of a period and holds eight points; a single season is cut into three.
     """
-    everything = _sine_fit(orbit, fold, error, np.ones(fold.time.size, dtype=bool))
+    everything = _sine_fit(orbit, fold, error, np.arange(fold.time.size))
     blocks = [_sine_fit(orbit, fold, error, rows) for rows in _blocks(orbit, fold.time)]
     return everything, blocks
 
@@ -126,7 +126,7 @@ def _blocks(orbit: Orbit, time: Array) -> list[IntArray]:
     return joined
 
 
-def _sine_fit(orbit: Orbit, fold: Fold, error: Array, rows: Array) -> Block:
+def _sine_fit(orbit: Orbit, fold: Fold, error: Array, rows: IntArray) -> Block:
     time, rv, err = fold.time[rows], fold.rv[rows], error[rows]
     angle = 2 * np.pi * folded(orbit, time)
     design = np.stack([np.sin(angle), np.cos(angle), np.ones_like(angle)], axis=1) / err[:, None]

@@ -260,6 +260,15 @@ def _dense_stretch(screening: Screening) -> tuple[float, float] | None:
     return start - 0.03 * length, start + length
 
 
+def _shown_rows(grid: Array, stretch: tuple[float, float] | None) -> slice:
+    """The part of the model's grid inside a stretch, thinned to what a figure can show."""
+    first, last = (0, grid.size)
+    if stretch is not None:
+        first, last = (int(i) for i in np.searchsorted(grid, stretch))
+        first, last = max(first - 1, 0), min(last + 1, grid.size)
+    return slice(first, last, max(1, (last - first) // 1800))
+
+
 def activity_height(screening: Screening) -> float:
     """Height in inches: two panels where the series is too long for one."""
     return 2.6 if _dense_stretch(screening) is None else 4.3
@@ -279,8 +288,9 @@ def draw_activity(fig: FigureBase, screening: Screening) -> None:
     rv = remainder(screening) + products.activity_at_data
     series = products.series
     for row, axes in enumerate(panels):
-        grid = products.model_time - zero
-        mean, sd = products.activity_mean, products.activity_sd
+        rows = _shown_rows(products.model_time, stretch if row else None)
+        grid = products.model_time[rows] - zero
+        mean, sd = products.activity_mean[rows], products.activity_sd[rows]
         axes.fill_between(
             grid, mean - sd, mean + sd, color=LIGHT["star"], alpha=0.22, lw=0, label="±1σ"
         )

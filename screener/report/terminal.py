@@ -3,16 +3,16 @@
 from __future__ import annotations
 
 import sys
+from collections.abc import Callable
 from typing import IO
 
 from rich.console import Console
-from rich.markup import escape
 from rich.table import Table
 from rich.text import Text
 
 from screener.core import Grade, SignalVerdict, Verdict
 from screener.report.style import GRADE_SYMBOL
-from screener.report.words import chance, deciding_findings, number, odds, uncertain
+from screener.report.words import chance, compact, deciding_findings, number, odds, uncertain
 
 __all__ = ["print_summary"]
 
@@ -21,6 +21,7 @@ _STYLE = {
     Grade.AMBIGUOUS: "bold",
     Grade.LIKELY_STELLAR: "bold yellow",
 }
+_Maker = Callable[..., Text]
 
 
 def print_summary(verdict: Verdict, file: IO[str] | None = None) -> None:
@@ -33,56 +34,61 @@ def print_summary(verdict: Verdict, file: IO[str] | None = None) -> None:
     console = Console(
         file=stream, width=80 if plain else None, no_color=True if plain else None, highlight=False
     )
-    _print(console, verdict, _ascii(stream))
+    poor = not _takes_signs(stream)
+
+    def text(value: str, style: str = "") -> Text:
+        clean = "".join(char if char.isprintable() else " " for char in value)
+        return Text(_to_ascii(clean) if poor else clean, style=style)
+
+    _print(console, verdict, text)
 
 
-def _ascii(stream: IO[str]) -> bool:
-    """Whether the stream cannot take our signs."""
+def _takes_signs(stream: IO[str]) -> bool:
+    """Whether the encoding of a stream has our signs."""
     encoding = getattr(stream, "encoding", None) or "utf-8"
     try:
         "●◐✱±−×⁻⁹–".encode(encoding)
     except (UnicodeEncodeError, LookupError):
-        return True
-    return False
+        return False
+    return True
 
 
-def _print(console: Console, verdict: Verdict, ascii_only: bool) -> None:
-    def text(value: str, style: str = "") -> Text:
-        return Text(_to_ascii(value) if ascii_only else value, style=style)
-
-    facts = (
-        f"{verdict.n_obs} velocities in {verdict.n_nights} nights over "
-        f"{number(verdict.baseline, 4)} d, {', '.join(verdict.instruments)}"
-    )
+def _print(console: Console, verdict: Verdict, text: _Maker) -> None:
     rotation = verdict.rotation
-    known = (
-        f"rotation {uncertain(rotation.period, rotation.period_err)} d"
-        if rotation.period is not None
-        else "rotation not known"
+    spin = "not known"
+    if rotation.period is not None:
+        spin = f"{uncertain(rotation.period, rotation.period_err)} d"
+    console.print(text(verdict.star.name, "bold"))
+    console.print(
+        text(
+            f"{verdict.n_obs} velocities, {verdict.n_nights} nights, "
+            f"{number(verdict.baseline, 4)} d; {', '.join(verdict.instruments)}"
+        )
     )
-    console.print(text(_clean(verdict.star.name), "bold"))
-    console.print(text(f"{_clean(facts)}; {known}"))
+    console.print(text(f"rotation: {spin}"))
     if not verdict.signals:
         console.print(text("No significant period was found."))
     else:
+        console.print()
         console.print(_table(verdict, text))
+        console.print()
         for item in verdict.signals:
-            console.print(text(f"{item.signal.id}: {_clean(_why(item))}"))
+            console.print(text(f"{item.signal.id}: {_why(item)}"))
     for caution in verdict.cautions:
-        console.print(text(f"Caution: {_clean(caution)}", "yellow"))
+        console.print(text(f"Caution: {caution}", "yellow"))
 
 
-def _table(verdict: Verdict, text) -> Table:  # type: ignore[no-untyped-def]
-    table = Table(box=None, pad_edge=False, show_edge=False)
+def _table(verdict: Verdict, text: _Maker) -> Table:
+    table = Table(box=None, pad_edge=False, show_edge=False, padding=(0, 2, 0, 0))
     for name in ("", "period (d)", "K (m/s)", "e", "FAP", "grade", "odds"):
-        table.add_column(escape(name), overflow="fold", justify="left")
+        table.add_column(name, no_wrap=name in ("", "e", "FAP", "grade"), overflow="fold")
     for item in verdict.signals:
         orbit = item.signal.orbit
         table.add_row(
             text(item.signal.id),
-            text(uncertain(orbit.period, orbit.period_err, 5)),
-            text(uncertain(orbit.semi_amplitude, orbit.semi_amplitude_err, 3)),
-            text(number(orbit.eccentricity, 2)),
+            text(_tight(orbit.period, orbit.period_err, 5)),
+            text(_tight(orbit.semi_amplitude, orbit.semi_amplitude_err, 3)),
+            text(compact(orbit.eccentricity, 2)),
             text(chance(item.signal.false_alarm_probability)),
             text(f"{GRADE_SYMBOL[item.grade]} {item.grade.value}", _STYLE[item.grade]),
             text(_short_odds(item.score)),
@@ -90,25 +96,23 @@ def _table(verdict: Verdict, text) -> Table:  # type: ignore[no-untyped-def]
     return table
 
 
+def _tight(value: float, error: float | None, digits: int) -> str:
+    return uncertain(value, error, digits).replace(" ± ", "±")
+
+
 def _short_odds(score: float) -> str:
-    return (
-        odds(score)
-        .replace(" for a planet", " for")
-        .replace(" against a planet", " against")
-        .replace("more than ", ">")
-        .replace("about ", "")
-    )
+    """As a ratio: "300:1" for a planet, "1:200" against one."""
+    words = odds(score).replace("more than ", ">").replace("about ", "")
+    ratio, _, _ = words.partition(" to 1")
+    if ratio == words:
+        return words.replace(" odds", "")
+    return f"{ratio}:1" if score > 0 else f"1:{ratio}"
 
 
 def _why(item: SignalVerdict) -> str:
     deciding = deciding_findings(item, 1)
-    reason = deciding[0].sentence if deciding else "no test had anything to say."
+    reason = deciding[0].sentence if deciding else "No test had anything to say."
     return f"{reason} Next: {item.next_step}" if item.next_step else reason
-
-
-def _clean(value: str) -> str:
-    """Without control characters, which could steer a terminal."""
-    return "".join(char if char.isprintable() else " " for char in value)
 
 
 _PLAIN = {
@@ -118,5 +122,7 @@ _PLAIN = {
 
 
 def _to_ascii(value: str) -> str:
+    # powers of ten first: 3x10^-14, not 3x10-14
+    value = value.replace("10⁻", "10^-")
     replaced = "".join(_PLAIN.get(char, char) for char in value)
     return replaced.encode("ascii", errors="replace").decode("ascii")

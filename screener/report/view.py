@@ -7,9 +7,7 @@ markup: names come from tables of strangers and are escaped by whoever writes th
 from __future__ import annotations
 
 import shlex
-from collections.abc import Mapping
 from dataclasses import dataclass
-from typing import Any
 
 from screener.core import (
     Finding,
@@ -32,6 +30,7 @@ from screener.report.words import (
     MISSING,
     amplitude,
     chance,
+    compact,
     deciding_findings,
     effect_text,
     grade_sentence,
@@ -221,7 +220,7 @@ def _finding_view(finding: Finding) -> FindingView:
         if isinstance(value, bool):
             details.append(f"{name.replace('_', ' ')}: {'yes' if value else 'no'}")
         elif isinstance(value, int | float):
-            details.append(f"{name.replace('_', ' ')}: {number(float(value), 3)}")
+            details.append(f"{name.replace('_', ' ')}: {compact(value)}")
         elif value is not None:
             details.append(f"{name.replace('_', ' ')}: {value}")
     return FindingView(
@@ -230,9 +229,9 @@ def _finding_view(finding: Finding) -> FindingView:
         symbol=OUTCOME_SYMBOL[finding.outcome],
         colour=OUTCOME_COLOUR[finding.outcome],
         sentence=finding.sentence,
-        statistic=number(finding.statistic, 3),
+        statistic=compact(finding.statistic),
         p_value=chance(finding.p_value),
-        power=MISSING if finding.power is None else f"{100 * finding.power:.0f} %",
+        power=MISSING if finding.power is None else f"{100 * finding.power:.0f}\u00a0%",
         details="; ".join(details),
     )
 
@@ -391,8 +390,3 @@ def command_line(verdict: Verdict) -> str:
             break
     parts += ["--depth", verdict.depth.value, "--seed", str(verdict.seed)]
     return shlex.join(parts)
-
-
-def as_mapping(view: DossierView) -> Mapping[str, Any]:
-    """The fields of a view by name, for a template."""
-    return vars(view)

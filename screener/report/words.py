@@ -9,6 +9,7 @@ from screener.core import Finding, Grade, Outcome, RuleEffect, Signal, SignalVer
 __all__ = [
     "amplitude",
     "chance",
+    "compact",
     "deciding_findings",
     "effect_text",
     "grade_sentence",
@@ -38,6 +39,14 @@ def number(value: float | None, digits: int = 3) -> str:
     return f"{mantissa}×10{str(int(power)).translate(_SUPERSCRIPT)}".replace("-", "−")
 
 
+def compact(value: float | None, digits: int = 3) -> str:
+    """As ``number``, without zeros at the end of a fraction, and counts as they are."""
+    if isinstance(value, int):
+        return str(value).replace("-", "−")
+    text = number(value, digits)
+    return text.rstrip("0").rstrip(".") if "." in text and "×" not in text else text
+
+
 def uncertain(value: float | None, error: float | None, digits: int = 4) -> str:
     """``value ± error`` with two digits of the error; ``digits`` significant ones without it."""
     if value is None or not math.isfinite(value):
@@ -55,7 +64,8 @@ def chance(value: float | None) -> str:
     if value <= 0:
         return "<10⁻³⁰⁰"
     if value < 0.001:
-        return f"10{str(round(math.log10(value))).translate(_SUPERSCRIPT)}"
+        mantissa, power = f"{value:.0e}".split("e")
+        return f"{mantissa}×10{str(int(power)).translate(_SUPERSCRIPT)}"
     return f"{value:.2f}" if value >= 0.1 else f"{value:.3f}"
 
 
@@ -80,11 +90,11 @@ def odds(score: float) -> str:
         return "about even odds"
     if ratio > 1000:
         return f"more than 1000 to 1 {side}"
-    return f"about {number(ratio, 1 if ratio > 10 else 2)} to 1 {side}"
+    return f"about {float(f'{ratio:.1g}' if ratio >= 20 else f'{ratio:.2g}'):g} to 1 {side}"
 
 
 def signal_name(signal: Signal) -> str:
-    """ "S1 (11.19 d)" """
+    """Id and period: "S1 (11.19 d)"."""
     return f"{signal.id} ({number(signal.orbit.period, 4)} d)"
 
 
