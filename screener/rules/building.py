@@ -109,9 +109,11 @@ class Builder:
         self, entry: Entry, key: str, low: float, high: float, default: float | None = None
     ) -> float:
         value = entry.data.get(key, default)
+        number = math.nan
         if isinstance(value, int | float) and not isinstance(value, bool):
-            if math.isfinite(value) and low <= value <= high:
-                return float(value)
+            number = float(value)
+        if low <= number <= high:  # never so for NaN
+            return number
         problem = "is missing" if value is None else f"{value!r} is no number in the allowed range"
         self.fault(entry, key, problem, f"Write a number from {low:g} to {high:g}")
         return 0.0 if default is None else default
