@@ -146,10 +146,16 @@ def check_errors(
     if column is None or reference is None:
         return
     measured = np.isfinite(reference.values)
+    positive = column.raw[measured & (column.raw > 0.0)]
+    typical = float(np.median(positive)) if positive.size else 0.0
     tests = (
         (measured & np.isnan(column.raw), "is missing although the velocity is there"),
         (measured & np.isinf(column.raw), "is infinite"),
         (measured & (column.raw <= 0.0), "is not positive"),
+        (
+            measured & (column.raw > 0.0) & (column.raw < 1e-3 * typical),
+            "is a thousand times smaller than the others: it would outweigh them all",
+        ),
     )
     for bad, what in tests:
         if not np.any(bad):

@@ -148,7 +148,7 @@ def number_column(raw: RawTable, index: int, name: str, faults: FaultList) -> Ar
         return None
     cells = raw.columns[index]
     if cells.dtype == np.float64:
-        return np.asarray(cells, dtype=np.float64)
+        return _bounded(cells)
     values = np.full(cells.size, np.nan)
     for i, cell in enumerate(cells):
         if cell.lower() in BLANKS:
@@ -163,7 +163,15 @@ def number_column(raw: RawTable, index: int, name: str, faults: FaultList) -> Ar
                 _cure_for(cell, name),
             )
             return None
-    return values
+    return _bounded(values)
+
+
+def _bounded(values: NDArray[Any]) -> Array:
+    """Numbers that would overflow when squared count as infinite."""
+    out = np.array(values, dtype=np.float64)
+    huge = np.abs(out) > 1e100
+    out[huge] = np.copysign(np.inf, out[huge])
+    return out
 
 
 def _readable(cell: str) -> bool:

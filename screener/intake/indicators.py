@@ -96,9 +96,10 @@ def _clean_errors(
     errors = error.values.copy()
     measured = np.isfinite(values)
     with np.errstate(invalid="ignore"):
-        bad = measured & ~np.isnan(errors) & ((errors <= 0.0) | np.isinf(errors))
+        given = errors[measured & (errors > 0.0)]
+        typical = float(np.median(given)) if given.size else 0.0
+        bad = measured & ~np.isnan(errors) & ((errors <= 1e-3 * typical) | np.isinf(errors))
     nines = np.array([np.isfinite(v) and abs(v) >= 99.0 and is_nines(v) for v in error.raw])
-    typical = np.median(errors[measured & (errors > 0.0)]) if np.any(errors > 0.0) else 0.0
     bad |= measured & nines & (errors > 50.0 * typical)
     if np.any(bad):
         first = int(np.flatnonzero(bad)[0])

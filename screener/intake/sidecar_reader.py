@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import math
 import tomllib
 from dataclasses import fields, replace
 from pathlib import Path
@@ -160,9 +159,9 @@ class _Reader:
                 f"Write {key} = 1.0 without quotes.",
             )
             return None
-        if not math.isfinite(value) or not low <= value <= high:
+        if value != value or not low <= value <= high:  # integers of any size compare exactly
             self.fault(
-                f"[{name}] {key} = {value} is outside {low:g} to {high:g}",
+                f"[{name}] {key} = {str(value)[:30]} is outside {low:g} to {high:g}",
                 "Check the value and its unit, which the end of the key names, "
                 "or leave the key out.",
             )
@@ -250,7 +249,7 @@ class _Reader:
                     f"Write {name} = -1 or {name} = [-1, -9999999].",
                 )
                 continue
-            found[name] = tuple(float(v) for v in values)
+            found[name] = tuple(float(v) for v in values if abs(v) < 1e300)
         return found
 
     def entries(self, table: dict[str, Any], name: str, extra: tuple[str, ...]) -> dict[str, Any]:

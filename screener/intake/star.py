@@ -30,7 +30,7 @@ from screener.intake.files import FaultList, digest, guarded, read_bytes
 from screener.intake.indicators import CleanIndicator, clean_indicator, with_errors
 from screener.intake.photometry import read_photometry
 from screener.intake.raw import RawTable
-from screener.intake.reduce import reduce_exposures
+from screener.intake.reduce import MIN_BINS, reduce_exposures
 from screener.intake.sidecar import Sidecar
 from screener.intake.sidecar_reader import read_sidecar
 from screener.intake.tables import read_table
@@ -136,6 +136,13 @@ def observe(source: Source, faults: FaultList) -> Observations:
         time, columns, [c for c in cleaned if c], index, light[0] if light else None, messages
     )
     series, outliers, width = reduce_exposures(exposures, messages)
+    if np.bincount(series.instrument).max(initial=0) < MIN_BINS:
+        faults.add(
+            f"column 'instrument', data row {columns.rows[index[0]]}: none of the "
+            f"{len(exposures.instruments)} instruments has {MIN_BINS} usable bins",
+            "Each label has a zero point of its own; give one label to rows of one instrument.",
+        )
+        faults.check()
     nights = count_nights(series.time)
     if nights < sidecar.min_nights:
         faults.add(

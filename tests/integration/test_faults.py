@@ -253,6 +253,11 @@ def label_per_row(folder: Path) -> Path:
     return edited(folder, instrument=np.array([f"file{i}.fits" for i in range(40)], dtype=object))
 
 
+@case(r"none of the 20 instruments has 3 usable bins.*one label to rows of one instrument")
+def two_rows_per_label(folder: Path) -> Path:
+    return edited(folder, instrument=np.array([f"R{i // 2}" for i in range(40)], dtype=object))
+
+
 # --- times
 
 
@@ -372,6 +377,11 @@ def blank_error(folder: Path) -> Path:
 @case(r"data row 5: the error \(inf\) is infinite.*1-sigma")
 def infinite_error(folder: Path) -> Path:
     return edited(folder, rv_err=with_cell("rv_err", 4, "inf"))
+
+
+@case(r"data row 8: the error \(1e-06\) is a thousand times smaller.*1-sigma")
+def tiny_error(folder: Path) -> Path:
+    return edited(folder, rv_err=with_cell("rv_err", 7, 1e-6))
 
 
 @case(r"column 'rv', data row 11: the velocity is infinite.*leave the cell empty")

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import pickle
 from pathlib import Path
 
 import numpy as np
@@ -237,3 +238,8 @@ def test_what_is_no_catalogue_table(tmp_path: Path) -> None:
     assert not is_catalogue_table(write_csv(tmp_path / "star.csv", columns()))
     assert not is_catalogue_table(tmp_path / "absent.csv")
     assert not is_catalogue_table(tmp_path)
+
+
+def test_rows_of_a_star_cross_process_borders(tmp_path: Path) -> None:
+    stars = pickle.loads(pickle.dumps(read_catalogue_table(many_stars(tmp_path))))
+    assert_sound(read_star(stars["HIL 7"]))
