@@ -15,7 +15,11 @@ from screener.report.system_view import nested
 
 __all__ = ["draw_limits", "limit_curve"]
 
-_CURVES = (("k99_m_s", "99 % found", ":"), ("k90_m_s", "90 % found", "-"), ("k50_m_s", "50 % found", "--"))  # fmt: skip
+_CURVES = (
+    ("k99_m_s", "99 % found", ":"),
+    ("k90_m_s", "90 % found", "-"),
+    ("k50_m_s", "50 % found", "--"),
+)
 
 
 def limit_curve(system: Mapping[str, Any]) -> dict[str, Array] | None:

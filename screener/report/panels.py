@@ -185,6 +185,7 @@ def _draw_trace(axes: Any, trace: PeriodogramTrace) -> None:
     axes.set_ylim(0, 1.18 * top if top > 0 else 1.0)
     axes.locator_params(axis="y", nbins=3)
     name = trace.name if len(trace.name) <= 40 else trace.name[:39] + "…"
+    name = "window (amplitude)" if trace.name == "window" else name
     box = {"facecolor": LIGHT["paper"], "edgecolor": "none", "alpha": 0.8, "pad": 1.0}
     axes.text(
         0.008, 0.93, name, transform=axes.transAxes, va="top", weight="bold", bbox=box, zorder=7

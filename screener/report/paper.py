@@ -201,7 +201,8 @@ class Paper:
             for number, page in enumerate(self._pages, start=1):
                 foot = f"{self._title[:80]}, page {number} of {len(self._pages)}"
                 page.text(
-                    0.5, 0.6 / HEIGHT, foot, size=7.5, color=LIGHT["muted"], ha="center", parse_math=False
+                    0.5, 0.6 / HEIGHT, foot,
+                    size=7.5, color=LIGHT["muted"], ha="center", parse_math=False,
                 )  # fmt: skip
                 pages.savefig(page)
         return stream.getvalue()

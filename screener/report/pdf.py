@@ -78,8 +78,8 @@ def _signal(paper: Paper, signal: SignalView, figures: Sequence[FigureSpec]) -> 
         reasons = [
             (r.rule, r.effect, r.sentence, r.findings or "–", r.without) for r in signal.rules
         ]
-        head = ("rule", "effect", "because", "looked at", "grade without it")
-        paper.table(head, reasons, (18, 15, 32, 30, 15))
+        columns = ("rule", "effect", "because", "looked at", "grade without it")
+        paper.table(columns, reasons, (18, 15, 32, 30, 15))
 
 
 def _figure(paper: Paper, spec: FigureSpec) -> None:
@@ -128,8 +128,8 @@ def _rest(paper: Paper, view: DossierView) -> None:
     for sentence in view.data:
         paper.text(f"• {sentence}")
     if view.outliers:
-        head = ("time (BJD)", "instrument", "column", "value", "deviation")
-        paper.table(head, view.outliers, (1, 1, 1, 1, 1))
+        columns = ("time (BJD)", "instrument", "column", "value", "deviation")
+        paper.table(columns, view.outliers, (1, 1, 1, 1, 1))
     paper.heading("Methods and citations")
     for reference in view.references:
         paper.text(f"• {reference.line} For: {reference.purpose}.", 8)

@@ -263,6 +263,70 @@ def _signals() -> tuple[SignalVerdict, ...]:
     )
 
 
+def _system() -> dict[str, object]:
+    """As the room of the system describes one, cut short."""
+    periods = np.geomspace(1.2, 1200.0, 24)
+    curve = [
+        {
+            "period_d": float(p),
+            "k50_m_s": 0.6 + 0.2 * abs(np.sin(p)) + 3e-4 * p,
+            "k90_m_s": 0.9 + 0.3 * abs(np.sin(p)) + 5e-4 * p,
+            "k99_m_s": None if 300 < p < 400 else 1.3 + 0.4 * abs(np.sin(p)) + 7e-4 * p,
+        }
+        for p in periods
+    ]
+    mass = {"q05_mjup": 0.087, "median_mjup": 0.1, "q95_mjup": 0.29, "chance_above_13_mjup": 0.0}
+    night = {
+        "rank": 1,
+        "time_bjd_d": 2459300.7113,
+        "date": "2021-03-27",
+        "information_nat": 0.31,
+        "log_odds_so_far": 0.4,
+        "velocity_planet_m_s": -3.2,
+        "velocity_star_m_s": 1.9,
+        "altitude_deg": 61.0,
+        "moon_distance_deg": 84.0,
+        "moon_lit": 0.97,
+    }
+    return {
+        "planets": {
+            "S1": {
+                "m_sin_i_mjup": 0.0862,
+                "semi_major_axis_au": 0.204,
+                "true_mass": {"isotropic": mass},
+                "transit": {"probability": 0.017, "next_bjd_d": 2459178.33, "next_err_d": 0.4},
+            },
+            "K1": None,
+        },
+        "stability": {
+            "pairs": [
+                {
+                    "inner": "K1",
+                    "outer": "S1",
+                    "hill_separation": 34.2,
+                    "crossing": 0.0,
+                    "amd_unstable": 0.0,
+                    "commensurability": {"near": False, "p": 44, "q": 1},
+                }
+            ],
+            "n_body": None,
+        },
+        "outer_companion": None,
+        "alternatives": {"S1": {"preferred": "one circular", "delta_bic": 8.1}},
+        "nights": {
+            "S1": {
+                "nights": [night, {**night, "rank": 2, "date": "2021-04-02"}],
+                "site": "a northern site",
+                "extra_measurements": [{"sentence": "One night of photometry is worth three."}],
+            }
+        },
+        "sensitivity": {"curve": curve, "noise_inflation": 1.2},
+        "sentences": ["K1 and S1: 34.2 mutual Hill radii apart; orbits cross in 0 %."],
+        "unknown": float("nan"),
+        "remark": "Something that a later version may add to this mapping.",
+    }
+
+
 @functools.cache
 def sample(
     name: str = "Tern 14",
@@ -303,20 +367,7 @@ def sample(
             ModelComparison("activity and 1 planet", 1, -398.0, -418.8, 14, True),
             ModelComparison("activity and 2 planets", 2, -396.9, None, 19, False),
         ),
-        system={
-            "planets": [
-                {
-                    "id": "S1",
-                    "m_sin_i_mearth": 27.4,
-                    "m_sin_i_err_mearth": 1.3,
-                    "semi_major_axis_au": 0.204,
-                    "transit_probability": 0.017,
-                }
-            ],
-            "stability": {"amd_stable": True, "mutual_hill_separation": 21.0},
-            "statement": "The orbits of S1 and K1 are far apart and stable.",
-            "unknown": float("nan"),
-        },
+        system=_system(),
         cautions=("The velocities of SOUTH-2 cover one season only.",),
         references=("baluev2008", "haywood2014", "rajpaul2015"),
     )
