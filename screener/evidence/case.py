@@ -8,6 +8,7 @@ from dataclasses import dataclass
 import numpy as np
 
 from screener.core import Array, Depth, Rotation, Signal, Star, TimeSeries
+from screener.models.assessment import Assessment
 from screener.models.rotation import PeriodDensity
 
 __all__ = ["Case"]
@@ -36,6 +37,8 @@ class Case:
         The star's rotation period, combined from all sources.
     rotation_density : PeriodDensity or None
         The same as a probability density; None when nothing is known.
+    assessment : Assessment or None
+        The signal under every noise model.
     """
 
     star: Star
@@ -49,6 +52,7 @@ class Case:
     rotation_density: PeriodDensity | None
     depth: Depth
     seed: int
+    assessment: Assessment | None = None
 
     def rng(self, test: str) -> np.random.Generator:
         """A random stream of its own for each test and signal, the same in every run."""

@@ -18,6 +18,7 @@ from screener.search.periodogram import power
 __all__ = ["Assessment", "assess", "gain_of", "merge", "prediction_gain", "time_blocks"]
 
 _SIDEREAL_DAY, _YEAR = 0.99726957, 365.25
+_DOUBTFUL = 12.0  # gain below which the order of nested models is checked again
 
 
 @dataclass(frozen=True)
@@ -52,10 +53,9 @@ def gain_of(
     rest = [t for t in terms if t is not term]
     full = noise.fit(list(terms), near=near)
     without = noise.fit(rest, near=[full, *near])
-    full_again = noise.improve(list(terms), noise.transfer(noise.model(terms), without))
-    if full_again.objective > full.objective + 1:
-        full = full_again
-        without = noise.fit(rest, near=[full])
+    if full.profile - without.profile < _DOUBTFUL:
+        # the larger model may sit on a poorer optimum: start it from the smaller one's
+        full = noise.improve(list(terms), noise.transfer(noise.model(terms), without))
     return max(full.profile - without.profile, 0.0), full, without
 
 

@@ -24,12 +24,15 @@ import numpy as np
 from scipy.linalg import lapack
 
 from screener.core import Array, IntArray, NumericalError
+from screener.core.memory import keep_freed_memory
 from screener.models.kernels import Kernel, Lags
 from screener.models.kepler import solve_kepler
 
 __all__ = ["JointData", "JointModel", "OrbitTerm", "Solution"]
 
 _LOG_2PI = math.log(2 * math.pi)
+
+keep_freed_memory()
 
 
 @dataclass(frozen=True, eq=False)

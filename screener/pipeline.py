@@ -1,0 +1,253 @@
+"""One star from observations to verdict; no input or output here.
+
+The way of the data: star -> signals -> activity and orbit model -> lines of evidence -> rules ->
+verdict.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Sequence
+from dataclasses import dataclass
+
+import numpy as np
+
+from screener import __version__
+from screener.core import (
+    Array,
+    Depth,
+    Finding,
+    Grade,
+    Observations,
+    Orbit,
+    Rotation,
+    Screening,
+    Signal,
+    SignalVerdict,
+    Star,
+    TimeSeries,
+    Verdict,
+)
+from screener.curves import products
+from screener.evidence import run_all
+from screener.evidence.case import Case
+from screener.models.kepler import orbit_velocity
+from screener.models.portrait import Portrait, Sighting, paint
+from screener.models.rotation import PeriodDensity, estimate_rotation
+from screener.rules import Graded, RuleSet, grade, load_rules
+from screener.system import describe_system
+
+__all__ = ["Progress", "screen"]
+
+Progress = Callable[[str, float], None]
+_METHODS = ("baluev2008", "zechmeister2009", "rajpaul2015", "haywood2014", "delisle2020")
+
+
+def _silent(_stage: str, _share: float) -> None:
+    """No progress wanted."""
+
+
+@dataclass(frozen=True, eq=False)
+class _Judged:
+    signal: Signal
+    findings: tuple[Finding, ...]
+    graded: Graded
+
+
+def screen(
+    observations: Observations,
+    *,
+    depth: Depth = Depth.STANDARD,
+    seed: int = 1,
+    rules: RuleSet | None = None,
+    period: float | None = None,
+    progress: Progress | None = None,
+    with_products: bool = True,
+) -> Screening:
+    """Screen one star.
+
+    Parameters
+    ----------
+    observations : Observations
+        From ``screener.intake.read_star``.
+    depth, seed
+        How much work to spend, and the seed of every random draw. The same input, version, depth
+        and seed give the same verdict.
+    rules : RuleSet, optional
+        The default rules if absent.
+    period : float, optional
+        A period (d) that is to be graded whether or not a search finds it.
+    progress : callable, optional
+        Called with the name of the stage and the share done.
+    with_products : bool
+        Whether to make the arrays behind the figures as well.
+
+    Raises
+    ------
+    NumericalError
+        Where no noise model can be fitted.
+    """
+    rules = rules or load_rules()
+    tell = progress or _silent
+    series = observations.series
+    tell("rotation period", 0.0)
+    rotation, density = estimate_rotation(observations.star, series)
+    portrait = paint(
+        observations.star,
+        series,
+        observations.known_planets,
+        density,
+        depth,
+        forced=(period,) if period else (),
+        progress=tell,
+    )
+    tell("lines of evidence", 0.75)
+    judged, known = _judge(observations.star, series, portrait, rotation, density, rules, depth, seed)
+    tell("the system", 0.9)
+    verdict = _verdict(
+        observations, portrait, rotation, judged, known, rules=rules, depth=depth, seed=seed
+    )
+    shown = None
+    if with_products:
+        tell("curves for the figures", 0.97)
+        shown = products(series, portrait, [j.signal for j in judged], known)
+    tell("done", 1.0)
+    return Screening(verdict, shown)
+
+
+def _judge(
+    star: Star,
+    series: TimeSeries,
+    portrait: Portrait,
+    rotation: Rotation,
+    density: PeriodDensity | None,
+    rules: RuleSet,
+    depth: Depth,
+    seed: int,
+) -> tuple[list[_Judged], list[Signal]]:
+    """Findings and grade of every signal."""
+    known = [
+        Signal(f"K{i}", orbit, 0.0, ("known",), known=True)
+        for i, orbit in enumerate(portrait.known, start=1)
+    ]
+    signals = [
+        _signal(f"S{i}", sighting) for i, sighting in enumerate(portrait.sightings, start=1)
+    ]
+    judged = []
+    for signal, sighting in zip(signals, portrait.sightings, strict=True):
+        others = tuple(s for s in (*signals, *known) if s is not signal)
+        own = orbit_velocity(sighting.assessment.white_orbit, series.time)
+        case = Case(
+            star=star,
+            series=series,
+            signal=signal,
+            others=others,
+            target_rv=portrait.residual + own,
+            residual_rv=portrait.residual,
+            rv_sd=portrait.white_sd,
+            rotation=rotation,
+            rotation_density=density,
+            depth=depth,
+            seed=seed,
+            assessment=sighting.assessment,
+        )
+        findings = run_all(case)
+        judged.append(_Judged(signal, findings, grade(findings, rules, signal)))
+    return judged, known
+
+
+def _signal(id: str, sighting: Sighting) -> Signal:
+    gains = sighting.assessment.gains
+    return Signal(
+        id=id,
+        orbit=sighting.orbit,
+        false_alarm_probability=sighting.false_alarm_probability,
+        found_by=sighting.found_by,
+        white_gain=gains["white noise"],
+        activity_gain=gains["joint process"],
+    )
+
+
+def _verdict(
+    observations: Observations,
+    portrait: Portrait,
+    rotation: Rotation,
+    judged: Sequence[_Judged],
+    known: Sequence[Signal],
+    *,
+    rules: RuleSet,
+    depth: Depth,
+    seed: int,
+) -> Verdict:
+    series = observations.series
+    grades: dict[str, Grade] = {j.signal.id: j.graded.grade for j in judged}
+    system = describe_system(
+        observations.star,
+        series,
+        [*(j.signal for j in judged), *known],
+        grades,
+        slope=portrait.slope,
+        slope_err=portrait.slope_err,
+        residual_sd=portrait.white_sd,
+        depth=depth,
+        seed=seed,
+        rotation=rotation,
+    )
+    verdicts = tuple(
+        SignalVerdict(
+            j.signal,
+            j.graded.grade,
+            j.graded.score,
+            j.findings,
+            j.graded.trace,
+            j.graded.deciding_rules,
+            j.graded.next_step,
+            j.graded.would_change,
+        )
+        for j in judged
+    )
+    used = {key for j in judged for f in j.findings for key in f.references}
+    return Verdict(
+        star=observations.star,
+        version=__version__,
+        rules=rules.label,
+        rules_sha256=rules.sha256,
+        seed=seed,
+        depth=depth,
+        record=observations.record,
+        notes=observations.notes,
+        n_obs=observations.notes.n_exposures,
+        n_nights=series.n_nights,
+        baseline=series.baseline,
+        instruments=series.instruments,
+        indicators=tuple(i.name for i in series.indicators),
+        rotation=rotation,
+        signals=verdicts,
+        known_planets=tuple(known),
+        models=portrait.comparisons,
+        system=system,
+        cautions=_cautions(observations, portrait, rotation),
+        references=tuple(sorted(used | set(_METHODS))),
+    )
+
+
+def _cautions(
+    observations: Observations, portrait: Portrait, rotation: Rotation
+) -> tuple[str, ...]:
+    """What a reader must know before trusting a grade."""
+    series = observations.series
+    out = []
+    if not series.indicators:
+        out.append(
+            "There is no activity indicator: nothing but the velocities can speak for the star."
+        )
+    if rotation.period is None:
+        out.append("The star's rotation period is not known.")
+    if series.n_nights < 40:
+        out.append(f"There are only {series.n_nights} nights.")
+    if series.baseline < 90:
+        out.append(f"The velocities span only {series.baseline:.0f} d.")
+    if not all(m.converged for m in portrait.comparisons):
+        out.append("A model fit stopped before it converged; its numbers are less certain.")
+    return tuple(out)
+
+
