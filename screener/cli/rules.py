@@ -16,6 +16,7 @@ from screener.rules import DEFAULT_FILE, RULE_KEYS, Rule, RuleSet, load_rules
 from screener.rules import grammar as _grammar
 from screener.rules.grammar import did_you_mean, write
 from screener.rules.scope import SIGNAL_FIELDS
+from screener.rules.types import Advice, PriorClass
 
 __all__ = ["command"]
 
@@ -63,7 +64,8 @@ def list_rules(overlay: Path | None, as_json: bool) -> None:
 def explain_rule(id: str, overlay: Path | None, as_json: bool) -> None:
     """Explain one rule, prior class or advice; or: keys, grammar, prior, thresholds."""
     rules = load_rules(None, overlay)
-    known = [r.id for r in rules.rules] + [x.id for x in (*rules.classes, *rules.advice)]
+    known = [r.id for r in rules.rules]
+    known += [c.id for c in rules.classes] + [a.id for a in rules.advice]
     if id in _TOPICS:
         click.echo(_topic(id, rules))
         return
@@ -77,7 +79,8 @@ def explain_rule(id: str, overlay: Path | None, as_json: bool) -> None:
             json.dumps(entry, indent=1, ensure_ascii=False) if as_json else _full(found, rules)
         )
         return
-    entry = next(_other(x) for x in (*rules.classes, *rules.advice) if x.id == id)
+    others: tuple[PriorClass | Advice, ...] = (*rules.classes, *rules.advice)
+    entry = next(_other(x) for x in others if x.id == id)
     if as_json:
         click.echo(json.dumps(entry, indent=1, ensure_ascii=False))
         return
@@ -135,7 +138,6 @@ def _as_dict(rule: Rule) -> dict[str, Any]:
         "to": ramp.stop,
         "scale": "log" if ramp.log else "linear",
     }
-    entry["withstand"] = None if rule.withstand is None else list(rule.withstand)
     entry["fitted"] = rule.fitted
     entry["cure"] = rule.cure or None
     entry["tests"] = list(rule.tests)
@@ -169,10 +171,6 @@ def _full(rule: Rule, rules: RuleSet) -> str:
         scale = " on a logarithmic scale" if ramp.log else ""
         lines.append(
             f"  ramp     nothing at {ramp.of} = {ramp.start:g}, all of it at {ramp.stop:g}{scale}"
-        )
-    if rule.withstand is not None:
-        lines.append(
-            f"  also falls where the worst from {', '.join(rule.withstand)} changed nothing"
         )
     if rule.fitted:
         lines.append("  fitted   the calibration sets the weight; its sign is fixed")

@@ -172,7 +172,6 @@ class Builder:
             unless=self.condition(entry, "unless", terms),
             weight=self.number(entry, effect, -MAX_WEIGHT, MAX_WEIGHT) if effect == "weight" else 0,
             ramp=self.ramp(entry),
-            withstand=self.withstand(entry, effect),
             cure=self.text(entry, "cure", ""),
             fitted=self.flag(entry, "fitted"),
             direction=self.direction(entry),
@@ -201,18 +200,6 @@ class Builder:
             self.fault(entry, "direction", f"{word!r} is no direction", cure)
             return 0
         return 1 if word == "planet" else -1
-
-    def withstand(self, entry: Entry, effect: str) -> tuple[str, ...] | None:
-        tests = entry.data.get("withstand")
-        if tests is None:
-            return None
-        if effect != "cap":
-            self.fault(entry, "withstand", f"does not go with a {effect}", "Only caps have it")
-        if not isinstance(tests, list) or not all(isinstance(t, str) for t in tests):
-            self.fault(entry, "withstand", "must be a list of tests", 'Write ["test", "test"]')
-            return None
-        self.look(entry, "withstand", tuple(Field(t, "present") for t in tests))
-        return tuple(tests)
 
     def sense(self, entry: Entry, rule: Rule) -> None:
         """What is well formed but makes no sense."""

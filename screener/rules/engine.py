@@ -18,11 +18,10 @@ _RANK = {Grade.LIKELY_STELLAR: 0, Grade.AMBIGUOUS: 1, Grade.PLANETARY: 2}
 
 @dataclass(frozen=True)
 class Fired:
-    """A rule that fired, what it adds, and what must be withstood for a cap to fall."""
+    """A rule that fired, and what it adds."""
 
     rule: Rule
     value: float  # log-odds; 0 unless a weight
-    worst: float | None = None  # log-odds that absent tests might have taken away; caps only
 
 
 def grade(findings: Sequence[Finding], rules: RuleSet, signal: Signal | None = None) -> Graded:
@@ -56,8 +55,6 @@ def grade(findings: Sequence[Finding], rules: RuleSet, signal: Signal | None = N
         without = combine(prior + shift - kind.shift, fired, rules.thresholds)[1]
         trace.append(RuleEffect(kind.id, kind.sentence, "weight", kind.shift, (), without))
     for item in fired:
-        if _withstood(item, score, rules.thresholds):
-            continue
         rest = [f for f in fired if f is not item]
         without = combine(prior + shift, rest, rules.thresholds)[1]
         trace.append(_effect(item, scope, without))
@@ -85,7 +82,7 @@ def combine(prior: float, fired: Iterable[Fired], thresholds: Thresholds) -> tup
         result = Grade.LIKELY_STELLAR
     else:
         result = Grade.AMBIGUOUS
-    effects = {f.rule.effect for f in fired if not _withstood(f, score, thresholds)}
+    effects = {f.rule.effect for f in fired}
     if "floor" in effects and result is Grade.LIKELY_STELLAR:
         result = Grade.AMBIGUOUS
     if "cap" in effects and result is Grade.PLANETARY:
@@ -95,31 +92,9 @@ def combine(prior: float, fired: Iterable[Fired], thresholds: Thresholds) -> tup
     return score, result
 
 
-def _withstood(fired: Fired, score: float, thresholds: Thresholds) -> bool:
-    return fired.worst is not None and score + fired.worst >= thresholds.planetary_above
-
-
 def _fired(rules: RuleSet, scope: Scope) -> list[Fired]:
-    shares = {rule.id: rule.share(scope) for rule in rules.rules}
-    fired = []
-    for rule in rules.rules:
-        share = shares[rule.id]
-        if share == 0.0:
-            continue
-        worst = None
-        if rule.withstand is not None:
-            worst = sum(
-                r.weight
-                for r in rules.rules
-                if r.weight < 0.0 and shares[r.id] < 1.0 and _might_fire(r, rule.withstand, scope)
-            )
-        fired.append(Fired(rule, rule.weight * share, worst))
-    return fired
-
-
-def _might_fire(rule: Rule, tests: tuple[str, ...], scope: Scope) -> bool:
-    """Whether one of these tests, now absent, could have made the rule fire."""
-    return any(f.test in tests and scope.value(f) is None for f in rule.fields)
+    shares = [(rule, rule.share(scope)) for rule in rules.rules]
+    return [Fired(rule, rule.weight * share) for rule, share in shares if share > 0.0]
 
 
 def _prior_effect(

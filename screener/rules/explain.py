@@ -23,8 +23,8 @@ SHORT_NAMES: Mapping[str, tuple[Field, float]] = {
     "half_period": (Field(SIGNAL, "period"), 0.5),
     "period_years": (Field(SIGNAL, "period"), 1.0 / _YEAR),
     "amplitude": (Field(SIGNAL, "semi_amplitude"), 1.0),
-    "rotation": (Field("rotation", "period"), 1.0),
-    "half_cycle_years": (Field("cycle", "period"), 0.5 / _YEAR),
+    "rotation": (Field("rotation", "rotation_period"), 1.0),
+    "half_cycle_years": (Field("cycle", "cycle_period"), 0.5 / _YEAR),
 }
 
 

@@ -66,8 +66,6 @@ RULE_KEYS: Mapping[str, Mapping[str, str]] = {
         "veto": 'effect: the grade is "likely stellar"; needs positive evidence',
         "cap": 'effect: the grade is at most "ambiguous"',
         "floor": 'effect: the grade is at least "ambiguous", unless a veto fires',
-        "withstand": "tests (cap only): the cap also falls where the score would stay above "
-        "planetary_above even if those of them that are absent had said the worst",
         "cure": "clause that completes 'it would change if ...'",
         "fitted": "true: the calibration sets the weight",
         "direction": '"planet" or "star": the sign a fitted weight keeps',
@@ -129,7 +127,6 @@ class Rule:
     unless: Condition | None = None
     weight: float = 0.0
     ramp: Ramp | None = None
-    withstand: tuple[str, ...] | None = None
     cure: str = ""
     fitted: bool = False
     direction: int = 0  # +1 planet, -1 star
@@ -280,7 +277,7 @@ def _content(rules: RuleSet) -> dict[str, object]:
         ],
         "rules": [
             [
-                *(r.id, r.sentence, r.effect, r.weight, r.withstand, r.cure),
+                *(r.id, r.sentence, r.effect, r.weight, r.cure),
                 *(_text(r.when), _text(r.unless), _ramp(r.ramp)),
             ]
             for r in rules.rules
