@@ -11,6 +11,8 @@ from dataclasses import dataclass
 
 import numpy as np
 
+from threadpoolctl import threadpool_limits
+
 from screener import __version__
 from screener.core import (
     Array,
@@ -87,7 +89,20 @@ def screen(
         Where no noise model can be fitted.
     """
     rules = rules or load_rules()
-    tell = progress or _silent
+    # two numeric threads on two busy cores make small factorisations hundreds of times slower
+    with threadpool_limits(1):
+        return _screen(observations, depth, seed, rules, period, progress or _silent, with_products)
+
+
+def _screen(
+    observations: Observations,
+    depth: Depth,
+    seed: int,
+    rules: RuleSet,
+    period: float | None,
+    tell: Progress,
+    with_products: bool,
+) -> Screening:
     series = observations.series
     tell("rotation period", 0.0)
     rotation, density = estimate_rotation(observations.star, series)
@@ -101,7 +116,9 @@ def screen(
         progress=tell,
     )
     tell("lines of evidence", 0.75)
-    judged, known = _judge(observations.star, series, portrait, rotation, density, rules, depth, seed)
+    judged, known = _judge(
+        observations.star, series, portrait, rotation, density, rules, depth, seed
+    )
     tell("the system", 0.9)
     verdict = _verdict(
         observations, portrait, rotation, judged, known, rules=rules, depth=depth, seed=seed
@@ -129,9 +146,7 @@ def _judge(
         Signal(f"K{i}", orbit, 0.0, ("known",), known=True)
         for i, orbit in enumerate(portrait.known, start=1)
     ]
-    signals = [
-        _signal(f"S{i}", sighting) for i, sighting in enumerate(portrait.sightings, start=1)
-    ]
+    signals = [_signal(f"S{i}", sighting) for i, sighting in enumerate(portrait.sightings, start=1)]
     judged = []
     for signal, sighting in zip(signals, portrait.sightings, strict=True):
         others = tuple(s for s in (*signals, *known) if s is not signal)
@@ -249,5 +264,3 @@ def _cautions(
     if not all(m.converged for m in portrait.comparisons):
         out.append("A model fit stopped before it converged; its numbers are less certain.")
     return tuple(out)
-
-

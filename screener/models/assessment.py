@@ -18,6 +18,7 @@ from screener.search.periodogram import power
 __all__ = ["Assessment", "assess", "gain_of", "merge", "prediction_gain", "time_blocks"]
 
 _SIDEREAL_DAY, _YEAR = 0.99726957, 365.25
+_HOPELESS = 4.0  # gain at a glance below which no refit can make a signal
 _DOUBTFUL = 12.0  # gain below which the order of nested models is checked again
 
 
@@ -51,7 +52,14 @@ def gain_of(
     rounding and is reported as zero.
     """
     rest = [t for t in terms if t is not term]
-    full = noise.fit(list(terms), near=near)
+    known = noise.known(list(terms))
+    if known is None and noise.kernel is not None:
+        # not part of the activity model's set: a glance tells whether it could ever matter
+        without = noise.known(rest) or noise.fit(rest, near=near)
+        full = noise.glance(list(terms), without)
+        if full.profile - without.profile < _HOPELESS:
+            return max(full.profile - without.profile, 0.0), full, without
+    full = known or noise.fit(list(terms), near=near)
     without = noise.fit(rest, near=[full, *near])
     if full.profile - without.profile < _DOUBTFUL:
         # the larger model may sit on a poorer optimum: start it from the smaller one's

@@ -71,13 +71,14 @@ def usable(frequency: Array, baseline: float) -> Array:
 def _best_peak(
     noise: NoiseModel, result: Fit, terms: Sequence[OrbitTerm], candidates: Sequence[Peak]
 ) -> tuple[OrbitTerm, Fit]:
-    """Refit each of the candidate frequencies and keep the best."""
+    """Refit each of the candidate frequencies a little, then the best of them in full."""
     trials = []
     for peak in candidates:
         term = noise.term(1 / peak.frequency)
-        trials.append((noise.fit([*terms, term], near=[result]), term))
-    best, term = max(trials, key=lambda pair: pair[0].objective)
-    return term, best
+        glance = noise.glance([*terms, term], result)
+        trials.append((glance.objective, term, glance))
+    _, term, start = max(trials, key=lambda item: item[0])
+    return term, noise.fit([*terms, term], near=[start])
 
 
 def _shape(noise: NoiseModel, terms: list[OrbitTerm], result: Fit) -> tuple[list[OrbitTerm], Fit]:

@@ -152,7 +152,7 @@ def fit(
             jac=True,
             method="L-BFGS-B",
             bounds=list(zip(lower, upper, strict=True)),
-            options={"maxiter": max_iterations, "ftol": 1e-7, "gtol": 1e-3, "maxcor": 20},
+            options={"maxiter": max_iterations, "ftol": 1e-6, "gtol": 1e-3, "maxcor": 25},
         )
         if run.fun >= _REFUSED or (best is not None and -run.fun <= best.objective):
             continue

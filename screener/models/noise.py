@@ -65,6 +65,17 @@ class NoiseModel:
             self._fits[key] = result
         return self._fits[key]
 
+    def known(self, orbits: Sequence[OrbitTerm]) -> Fit | None:
+        """The fit with these orbits if there was one already."""
+        return self._fits.get(tuple(orbits))
+
+    def glance(self, orbits: Sequence[OrbitTerm], near: Fit, iterations: int = 8) -> Fit:
+        """A few steps from a neighbour's solution: enough to rank trials, not remembered."""
+        model = self.model(orbits)
+        result = fit(model, self.prior, [self.transfer(model, near)], iterations)
+        self.n_evaluations += result.n_evaluations
+        return result
+
     def improve(self, orbits: Sequence[OrbitTerm], start: Array) -> Fit:
         """The known fit of these orbits, or a better one reached from ``start``."""
         key = tuple(orbits)
