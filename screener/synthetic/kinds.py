@@ -38,6 +38,7 @@ class Kind:
     error: Range  # (log) median velocity error
     zeeman: Range  # (log)
     plage_gain: Range  # (log) relative S index per unit plage
+    rms: Range  # (log) scatter of the activity velocities over the campaign
     one_nest: bool = False  # a single active longitude
 
 
@@ -45,51 +46,58 @@ KINDS: dict[str, Kind] = {
     "active dwarf": Kind(
         teff=(4500, 5800), rotation=(9.2, 24), shear=(0.03, 0.2), number=(3, 8),
         area=(0.0015, 0.0055), life=(25, 90), facula_ratio=(1.5, 4), nest_share=(0.4, 0.9),
-        latitude=(0.2, 0.6), spot_contrast=(0.4, 0.65), quenching=(0.3, 0.9),
-        cycle=(1150, 2500), cycle_chance=0.9, cycle_depth=(0.2, 0.7), network=(1e-5, 2e-3),
-        error=(0.6, 2.8), zeeman=(200, 700), plage_gain=(1.5, 4),
+        latitude=(0.2, 0.6), spot_contrast=(0.4, 0.65), quenching=(0.25, 0.8),
+        cycle=(1150, 2500), cycle_chance=0.9, cycle_depth=(0.2, 0.7), network=(1e-5, 6e-3),
+        error=(0.6, 2.8), zeeman=(80, 350), plage_gain=(1.1, 3),
+        rms=(2.5, 9),
     ),
     "sunlike": Kind(
         teff=(5250, 6150), rotation=(20, 30), shear=(0.1, 0.25), number=(3, 9),
-        area=(0.00012, 0.0005), life=(15, 40), facula_ratio=(4, 9), nest_share=(0.2, 0.7),
-        latitude=(0.2, 0.4), spot_contrast=(0.45, 0.65), quenching=(0.6, 1.0),
-        cycle=(2100, 4800), cycle_chance=1.0, cycle_depth=(0.5, 1.0), network=(1e-4, 6e-3),
-        error=(0.6, 2.3), zeeman=(200, 700), plage_gain=(3, 9),
+        area=(0.00016, 0.0006), life=(15, 40), facula_ratio=(3.5, 8), nest_share=(0.2, 0.7),
+        latitude=(0.2, 0.4), spot_contrast=(0.45, 0.65), quenching=(0.4, 0.9),
+        cycle=(2100, 4800), cycle_chance=1.0, cycle_depth=(0.5, 1.0), network=(5e-4, 1.5e-2),
+        error=(0.5, 1.9), zeeman=(250, 900), plage_gain=(1.2, 4),
+        rms=(0.7, 3.5),
     ),
     "red dwarf": Kind(
-        teff=(3000, 3900), rotation=(21, 105), shear=(0.0, 0.014), number=(3, 8),
+        teff=(3000, 3900), rotation=(21, 85), shear=(0.0, 0.014), number=(3, 8),
         area=(0.007, 0.03), life=(120, 600), facula_ratio=(0.3, 1.5), nest_share=(0.7, 1.0),
-        latitude=(0.2, 0.9), spot_contrast=(0.12, 0.35), quenching=(0.05, 0.6),
+        latitude=(0.2, 0.9), spot_contrast=(0.25, 0.55), quenching=(0.02, 0.35),
         cycle=(1400, 3100), cycle_chance=0.5, cycle_depth=(0.1, 0.5), network=(1e-5, 1e-3),
-        error=(0.9, 3.2), zeeman=(100, 400), plage_gain=(2, 6),
+        error=(0.85, 3), zeeman=(20, 120), plage_gain=(1, 3),
+        rms=(1.3, 6.5),
     ),
     "facular": Kind(
         teff=(4900, 5900), rotation=(22, 43), shear=(0.05, 0.22), number=(3, 8),
-        area=(0.0002, 0.001), life=(22, 60), facula_ratio=(9, 20), nest_share=(0.2, 0.6),
-        latitude=(0.2, 0.45), spot_contrast=(0.4, 0.6), quenching=(0.6, 1.0),
-        cycle=(1100, 4000), cycle_chance=1.0, cycle_depth=(0.6, 1.0), network=(4e-3, 3e-2),
-        error=(0.55, 1.8), zeeman=(200, 700), plage_gain=(2, 6),
+        area=(0.0002, 0.001), life=(22, 60), facula_ratio=(7, 16), nest_share=(0.2, 0.6),
+        latitude=(0.2, 0.45), spot_contrast=(0.4, 0.6), quenching=(0.4, 0.8),
+        cycle=(1100, 4000), cycle_chance=1.0, cycle_depth=(0.6, 1.0), network=(1.2e-2, 6e-2),
+        error=(0.4, 1.35), zeeman=(200, 700), plage_gain=(1.5, 4),
+        rms=(1.8, 7),
     ),
     "fast spotted": Kind(
         teff=(4400, 5900), rotation=(4.0, 9.6), shear=(0.005, 0.04), number=(3, 8),
         area=(0.004, 0.016), life=(30, 110), facula_ratio=(0.3, 1.4), nest_share=(0.3, 0.9),
         latitude=(0.3, 1.0), spot_contrast=(0.5, 0.8), quenching=(0.2, 0.8),
-        cycle=(1400, 2100), cycle_chance=0.6, cycle_depth=(0.1, 0.4), network=(1e-5, 2e-3),
-        error=(2.2, 8.0), zeeman=(200, 700), plage_gain=(1, 3),
+        cycle=(1400, 2100), cycle_chance=0.6, cycle_depth=(0.1, 0.4), network=(1e-5, 1e-2),
+        error=(2.8, 8.5), zeeman=(300, 900), plage_gain=(1.3, 4),
+        rms=(17, 66),
     ),
     "calm": Kind(
         teff=(5000, 5800), rotation=(25, 45), shear=(0.1, 0.24), number=(2, 6),
-        area=(0.00005, 0.00015), life=(10, 24), facula_ratio=(5, 10), nest_share=(0.0, 0.4),
-        latitude=(0.2, 0.4), spot_contrast=(0.45, 0.65), quenching=(0.6, 1.0),
-        cycle=(2900, 4600), cycle_chance=0.6, cycle_depth=(0.3, 0.8), network=(1e-5, 1e-3),
-        error=(0.4, 1.3), zeeman=(200, 700), plage_gain=(3, 9),
+        area=(0.00005, 0.00015), life=(10, 24), facula_ratio=(4, 8), nest_share=(0.0, 0.4),
+        latitude=(0.2, 0.4), spot_contrast=(0.45, 0.65), quenching=(0.3, 0.7),
+        cycle=(2900, 4600), cycle_chance=0.6, cycle_depth=(0.3, 0.8), network=(1e-5, 2e-3),
+        error=(0.35, 1.15), zeeman=(150, 600), plage_gain=(1, 3.5),
+        rms=(0.31, 1.0),
     ),
     "nested red dwarf": Kind(
         teff=(2950, 3900), rotation=(10, 110), shear=(0.0, 0.003), number=(1.5, 4),
         area=(0.01, 0.03), life=(500, 2500), facula_ratio=(0.2, 1.2), nest_share=(0.93, 1.0),
-        latitude=(0.2, 1.0), spot_contrast=(0.12, 0.4), quenching=(0.0, 0.5),
+        latitude=(0.2, 1.0), spot_contrast=(0.2, 0.55), quenching=(0.0, 0.35),
         cycle=(1400, 3100), cycle_chance=0.2, cycle_depth=(0.1, 0.4), network=(1e-5, 1e-3),
-        error=(0.9, 3.2), zeeman=(100, 400), plage_gain=(2, 6), one_nest=True,
+        error=(0.9, 3.2), zeeman=(20, 120), plage_gain=(1, 3), one_nest=True,
+        rms=(1.2, 9),
     ),
 }  # fmt: skip
 

@@ -227,4 +227,5 @@ def photometry_times(kind: str, campaign: Campaign, rng: np.random.Generator) ->
     site = SITES[int(rng.integers(len(SITES)))]
     usable = (np.abs(offset) < 0.5 * campaign.season_length) & _clear(site, days.size, rng)
     days = days[usable]
-    return np.round(np.sort(days + 0.5 + 0.04 * rng.standard_normal(days.size)), 5)
+    times = np.sort(days + 0.5 + 0.04 * rng.standard_normal(days.size))
+    return np.asarray(np.round(times, 5), dtype=float)

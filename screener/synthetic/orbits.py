@@ -29,7 +29,7 @@ class PlanetPlan:
     """How many planets of what kind; the shares are per star."""
 
     number: tuple[float, ...] = (0.55, 0.32, 0.095, 0.035)  # chances of 0, 1, 2, 3 planets
-    at_rotation: float = 0.08  # share of planets put near rotation or a harmonic on purpose
+    at_rotation: float = 0.06  # share of planets put near rotation or a harmonic on purpose
     snr_range: tuple[float, float] = (5.4, 37.0)
     eccentric_giants: float = 0.0
     beyond_600_d: float = 0.0
@@ -90,7 +90,7 @@ def draw_planets(
         else:
             continue
         low, high = np.log(plan.snr_range)
-        snr = float(np.exp(low + (high - low) * rng.random() ** 1.15))
+        snr = float(np.exp(low + (high - low) * rng.random() ** 1.2))
         if purpose != "usual":
             snr *= 1.5
         if purpose == "eccentric giant":
@@ -125,5 +125,5 @@ def _draw_period(
     elif rng.random() < plan.at_rotation:
         return float(rotation / rng.integers(1, 4) * rng.uniform(0.91, 1.09))
     else:
-        low, high = 1.5, min(370.0, 0.45 * baseline)
+        low, high = 1.5, min(360.0, 0.38 * baseline)
     return float(np.exp(rng.uniform(np.log(low), np.log(high))))

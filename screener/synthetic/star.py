@@ -16,7 +16,7 @@ from screener.synthetic.activity import (
     correlated_noise,
     flux_at,
 )
-from screener.synthetic.disc import Disc, line_response
+from screener.synthetic.disc import Disc, LineResponse, line_response
 from screener.synthetic.kinds import KINDS, Body, Kind, body_of, calcium_of, draw_even, draw_log
 from screener.synthetic.observing import (
     Campaign,
@@ -36,6 +36,7 @@ from screener.synthetic.regions import Cycle, Habits, Regions, emerge
 
 __all__ = ["Column", "Recipe", "SyntheticStar", "simulate"]
 
+_MOST_COVERED = 0.2  # share of the disc under spots at most
 _LEAST_SNR = 4.1  # planets are lifted to this much against all the rest
 
 
@@ -95,7 +96,7 @@ def simulate(name: str, recipe: Recipe, rng: np.random.Generator) -> SyntheticSt
     regions = emerge(habits, disc, float(time[0]) - 60.0, float(time[-1]) + 60.0, cycle, rng)
     skin = _draw_skin(kind, cycle, rng)
     line = line_response(disc, body.local_fwhm)
-    activity = activity_at(disc, line, regions, skin, cycle, time)
+    activity, regions, skin = _tune(disc, line, regions, skin, cycle, time, draw_log(kind.rms, rng))
     granulation = _granulation(body, time, rng)
     white = _white_noise(campaign, rng)
     rotation = _rotation(regions, disc, habits)
@@ -155,7 +156,7 @@ def _draw_disc(kind: Kind, body: Body, recipe: Recipe, rng: np.random.Generator)
 def _draw_plan(kind: Kind, rng: np.random.Generator) -> Plan:
     return Plan(
         n_obs=int(np.clip(np.exp(rng.normal(np.log(108.0), 0.5)), 50, 295)),
-        n_seasons=int(rng.choice([1, 2, 3, 4, 5], p=[0.13, 0.30, 0.24, 0.21, 0.12])),
+        n_seasons=int(rng.choice([1, 2, 3, 4, 5], p=[0.16, 0.32, 0.23, 0.18, 0.11])),
         n_instruments=int(rng.choice([1, 2, 3], p=[0.46, 0.45, 0.09])),
         median_error=draw_log(kind.error, rng),
         exposures=float(rng.choice([1.0, 1.08, 1.55], p=[0.4, 0.35, 0.25])),
@@ -204,9 +205,32 @@ def _draw_skin(kind: Kind, cycle: Cycle | None, rng: np.random.Generator) -> Pho
     )
 
 
+def _tune(
+    disc: Disc,
+    line: LineResponse,
+    regions: Regions,
+    skin: Photosphere,
+    cycle: Cycle | None,
+    time: Array,
+    rms: float,
+) -> tuple[Activity, Regions, Photosphere]:
+    """Scale all areas together until the velocities scatter by ``rms`` (m/s), within limits.
+
+    The drawn areas fix the proportions; without this step the product of many drawn numbers would
+    spread over two decades, far more than stars of one kind do.
+    """
+    activity = activity_at(disc, line, regions, skin, cycle, time)
+    factor = rms / max(float(np.std(activity.rv)), 0.05 * rms)
+    factor = float(np.clip(factor, 0.1, 10.0))
+    factor = min(factor, _MOST_COVERED / max(activity.largest_cover, 1e-9))
+    regions = replace(regions, area=regions.area * factor, facula=regions.facula * factor)
+    skin = replace(skin, network=min(skin.network * factor, 0.12))
+    return activity_at(disc, line, regions, skin, cycle, time), regions, skin
+
+
 def _granulation(body: Body, time: Array, rng: np.random.Generator) -> Array:
     """Granulation (an hour) and supergranulation (most of a day), m/s."""
-    warm = float(np.interp(body.teff, [3000, 4500, 6000], [0.3, 0.45, 0.75]))
+    warm = float(np.interp(body.teff, [3000, 4500, 6000], [0.32, 0.42, 0.62]))
     level = warm * float(np.exp(0.25 * rng.standard_normal()))
     quick = correlated_noise(time, 0.04, 0.6 * level, rng)
     slow = correlated_noise(time, float(rng.uniform(0.3, 0.8)), 0.8 * level, rng)
@@ -280,8 +304,8 @@ def _indicators(
         return Column(signal + zeros[tools] + noise, error)
 
     wander = float(rng.uniform(0.003, 0.012))
-    plage = activity.plage - 0.0
-    ca = kind_gain = draw_log(kind.plage_gain, rng)
+    plage = activity.plage
+    ca = draw_log(kind.plage_gain, rng)
     s_signal = s_mean * (
         1.0 + ca * (plage - plage.mean()) + wander * correlated_noise(campaign.time, 2.0, 1.0, rng)
     )
@@ -289,9 +313,11 @@ def _indicators(
     # H-alpha: plages fill the line in, filaments deepen it, so its tie to calcium varies
     filaments = correlated_noise(campaign.time, float(rng.uniform(8, 40)), 1.0, rng)
     ha_mean = float(rng.uniform(0.45, 0.88)) if red else float(rng.uniform(0.165, 0.235))
-    ha_tie = kind_gain * float(rng.uniform(-0.1, 0.6))
+    ha_tie = ca * float(rng.uniform(-0.15, 0.4))
     ha_signal = ha_mean * (
-        1.0 + ha_tie * (plage - plage.mean()) + float(rng.uniform(0.002, 0.012)) * filaments
+        1.0
+        + ha_tie * (plage - plage.mean())
+        + (0.002 + float(rng.uniform(0.15, 0.6)) * ca * plage.std()) * filaments
     )
     if red:  # flares lift both lines for single exposures
         flare = np.where(rng.random(n) < 0.03, rng.exponential(0.08, n), 0.0)
