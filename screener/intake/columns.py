@@ -219,7 +219,7 @@ def extract(raw: RawTable, sidecar: Sidecar, faults: FaultList) -> Columns:
     indicators = _indicators(raw, sidecar, faults, messages, take)
     bands = []
     for name, band in sidecar.bands.items():
-        value = _further(raw, sidecar, name, band.column, faults, messages, "m/s", "bands")
+        value = _further(raw, sidecar, name, band.column, faults, messages, "m/s", "bands", rv)
         error = _further(
             raw, sidecar, f"{name}_err", band.err, faults, messages, "m/s", "bands", value
         )

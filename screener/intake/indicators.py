@@ -61,7 +61,11 @@ def clean_indicator(
     if n_measured == 0:
         messages.append(f"{_upper(value.where())} is empty and was left out.")
         return None
-    bad = measured & (_fill_values(raw, measured) | _impossible(value.name, values))
+    fill = _fill_values(raw, measured)
+    impossible = measured & ~fill & _impossible(value.name, values)
+    if _wrong_kind(value, rows, measured & ~fill, impossible, faults):
+        return None
+    bad = measured & (fill | impossible)
     if np.any(bad):
         first = int(np.flatnonzero(bad)[0])
         row, count = int(rows[first]), int(bad.sum())
@@ -86,6 +90,41 @@ def clean_indicator(
         return None
     errors = _clean_errors(error, values, rows, faults, messages)
     return CleanIndicator(value.name, values, errors)
+
+
+def _wrong_kind(
+    value: Column,
+    rows: IntArray,
+    measured: NDArray[np.bool_],
+    impossible: NDArray[np.bool_],
+    faults: FaultList,
+) -> bool:
+    """Faults for a column that holds something else: differences from a mean, or km/s."""
+    count = int(impossible.sum())
+    if count > 0.05 * measured.sum() and np.unique(value.raw[impossible]).size > 3:
+        first = int(np.flatnonzero(impossible)[0])
+        faults.add(
+            f"{value.where(int(rows[first]))}: {value.raw[first]:g} cannot be a {value.name}; "
+            f"{count} rows are like that",
+            "If these are differences from a mean, or another quantity, name the column in "
+            "[indicators] under a name of its own.",
+        )
+        return True
+    inside = value.values[measured & np.isfinite(value.values)]
+    if value.unit_from != "default" or inside.size < 3 or np.ptp(inside) == 0.0:
+        return False
+    # no star's lines are narrower than 1 km/s, no bisector is steady to 0.1 m/s (rules of thumb)
+    if (value.name == "fwhm" and np.median(inside) < 200.0) or (
+        value.name == "bis" and np.std(inside) < 0.1
+    ):
+        faults.add(
+            f"{value.where(int(rows[0]))}: the values look like km/s (median "
+            f"{np.median(inside):.3g}, scatter {np.std(inside):.2g}) but no unit is given and m/s "
+            "is the default",
+            f'Write [units] {value.name} = "km/s" in the sidecar (or "m/s" if they are).',
+        )
+        return True
+    return False
 
 
 def _clean_errors(

@@ -422,6 +422,18 @@ def indicator_errors_negative(folder: Path) -> Path:
     return edited(folder, s_index_err=np.full(40, -1.0))
 
 
+@case(r"column 'fwhm', data row 1: the values look like km/s.*\[units\] fwhm = \"km/s\"")
+def indicator_in_km_s(folder: Path) -> Path:
+    return edited(folder, fwhm=6.9 + 0.01 * np.sin(np.arange(40.0)))
+
+
+@case(
+    r"column 's_index', data row 2: \S+ cannot be a s_index; 19 rows.*\[indicators\] under a name"
+)
+def indicator_of_differences(folder: Path) -> Path:
+    return edited(folder, s_index=0.01 * np.cos(2.4 * np.arange(40.0)))
+
+
 @case(r"\[indicators\] points 'ripple' to column 'RIP'.*Correct the sidecar")
 def indicator_absent(folder: Path) -> Path:
     return with_sidecar(folder, '[indicators]\nripple = { column = "RIP" }\n')
