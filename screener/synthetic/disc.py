@@ -151,38 +151,73 @@ class LineResponse:
         )
 
 
-def line_response(disc: Disc, local_fwhm: float, n_grid: int = 121) -> LineResponse:
+def rotation_kernel(disc: Disc, n: int = 41) -> tuple[Array, Array]:
+    """Light of the disc by strips of equal velocity.
+
+    Returns the strips' velocities (m/s) and shares of the light (sum 1), both of shape (n,).
+    """
+    x = (np.arange(n) + 0.5) * 2.0 / n - 1.0
+    half = np.sqrt(1.0 - x**2)
+    # Gauss-Legendre along each strip
+    node, weight = np.polynomial.legendre.leggauss(12)
+    mu = np.sqrt(np.maximum((half[:, None] ** 2) * (1.0 - node[None, :] ** 2), 0.0))
+    light = half * (disc.intensity(mu) * weight).sum(axis=1)
+    return disc.vsini * x, light / light.sum()
+
+
+def line_response(disc: Disc, local_fwhm: float, n_grid: int = 81) -> LineResponse:
     """How the fitted Gaussian and the bisector answer to light lost at one velocity.
 
-    The local line is a Gaussian of ``local_fwhm`` (m/s); rotation widens it to a Gaussian of
-    variance local + rotational. Light lost at velocity v0 changes the normalised absorption
-    profile M by -(g(v - v0) - M(v)). Centre, depth and width follow from a least-squares fit of
-    the Gaussian, linearised; the bisector span is the velocity of the profile's top (10 to 40 per
-    cent of its depth) less that of its bottom (55 to 85 per cent; Queloz et al. 2001).
+    The local line is a Gaussian g of ``local_fwhm`` (m/s); the disc's line M is the sum of g over
+    the strips of the rotating disc. Light lost at velocity v0 changes the normalised absorption
+    profile M by g(v - v0) - M(v), downwards. Centre, depth and width follow from a least-squares
+    fit of a Gaussian to M, linearised about the best fit; the bisector span is the velocity of the
+    profile's top (10 to 40 per cent of its depth) less that of its bottom (55 to 85 per cent;
+    Queloz et al. 2001).
     """
     local = local_fwhm / _FWHM
-    total = float(np.hypot(local, disc.rotational_sigma()))
+    strips, light = rotation_kernel(disc)
     reach = max(disc.vsini, 1.0)
     lost_at = np.linspace(-reach, reach, n_grid)
-    v = np.linspace(-5.0 * total, 5.0 * total, 241)
+    guess = float(np.hypot(local, disc.rotational_sigma()))
+    v = np.linspace(-4.5 * guess, 4.5 * guess, 241)
 
-    def gauss(x: Array, sigma: float) -> Array:
-        return np.asarray(
-            np.exp(-0.5 * (x / sigma) ** 2) / (sigma * np.sqrt(2.0 * np.pi)), dtype=float
-        )
+    def local_line(x: Array) -> Array:
+        return np.asarray(np.exp(-0.5 * (x / local) ** 2), dtype=float)
 
-    def change(x: Array) -> Array:  # shape (n_grid, len(x))
-        return -(gauss(x[None, :] - lost_at[:, None], local) - gauss(x, total)[None, :])
+    line = local_line(v[:, None] - strips[None, :]) @ light
+    depth, sigma = _fit_gaussian(v, line, guess)
+    model = np.exp(-0.5 * (v / sigma) ** 2)
+    change = line[None, :] - local_line(v[None, :] - lost_at[:, None])
+    # derivatives by relative depth, centre and sigma
+    design = depth * np.stack([model, model * v / sigma**2, model * v**2 / sigma**3], axis=1)
+    d_depth, d_centre, d_sigma = np.linalg.lstsq(design, change.T, rcond=None)[0]
+    span = _bisector_shift(v, line, change, np.array([0.10, 0.20, 0.30, 0.40]))
+    span -= _bisector_shift(v, line, change, np.array([0.55, 0.65, 0.75, 0.85]))
+    return LineResponse(lost_at, d_centre, _FWHM * d_sigma, d_depth, span, _FWHM * sigma)
 
-    line = gauss(v, total)
-    # columns: relative depth, centre, sigma; area is not kept, so depth and width are both free
-    design = np.stack([line, line * v / total**2, line * v**2 / total**3], axis=1)
-    depth, centre, sigma = np.linalg.lstsq(design, change(v).T, rcond=None)[0]
-    top = np.array([0.10, 0.20, 0.30, 0.40])
-    bottom = np.array([0.55, 0.65, 0.75, 0.85])
-    spans = []
-    for levels in (top, bottom):
-        half = total * np.sqrt(-2.0 * np.log(levels))
-        slope = gauss(half, total) * half / total**2
-        spans.append(((change(half) - change(-half)) / (2.0 * slope)).mean(axis=1))
-    return LineResponse(lost_at, centre, _FWHM * sigma, depth, spans[0] - spans[1], _FWHM * total)
+
+def _fit_gaussian(v: Array, line: Array, sigma: float) -> tuple[float, float]:
+    """Depth and sigma of the Gaussian about zero that fits ``line`` best (Gauss-Newton)."""
+    depth = float(line.max())
+    for _ in range(12):
+        model = np.exp(-0.5 * (v / sigma) ** 2)
+        design = np.stack([model, depth * model * v**2 / sigma**3], axis=1)
+        step = np.linalg.lstsq(design, line - depth * model, rcond=None)[0]
+        depth, sigma = depth + float(step[0]), sigma + float(step[1])
+    return depth, sigma
+
+
+def _bisector_shift(v: Array, line: Array, change: Array, levels: Array) -> Array:
+    """Mean shift of the bisector at ``levels`` (of the depth) per unit ``change``, (n_grid,).
+
+    To first order each flank moves by change / |slope|; the bisector is the mean of both.
+    """
+    right = v >= 0.0
+    half = np.interp(levels * line.max(), line[right][::-1], v[right][::-1])
+    slope = np.abs(np.interp(half, v, np.gradient(line, v)))
+    moved = np.zeros(change.shape[0])
+    for w, steep in zip(half, slope, strict=True):
+        at = np.array([np.interp([w, -w], v, row) for row in change])
+        moved += (at[:, 0] - at[:, 1]) / (2.0 * steep * levels.size)
+    return moved

@@ -44,43 +44,43 @@ class Kind:
 
 KINDS: dict[str, Kind] = {
     "active dwarf": Kind(
-        teff=(4500, 5800), rotation=(9.2, 24), shear=(0.03, 0.2), number=(3, 8),
-        area=(0.0015, 0.0055), life=(25, 90), facula_ratio=(1.5, 4), nest_share=(0.4, 0.9),
+        teff=(4500, 5800), rotation=(9.2, 24), shear=(0.03, 0.2), number=(2.5, 6),
+        area=(0.0015, 0.0055), life=(25, 90), facula_ratio=(1.5, 4), nest_share=(0.5, 0.9),
         latitude=(0.2, 0.6), spot_contrast=(0.4, 0.65), quenching=(0.25, 0.8),
         cycle=(1150, 2500), cycle_chance=0.9, cycle_depth=(0.2, 0.7), network=(1e-5, 6e-3),
-        error=(0.6, 2.8), zeeman=(80, 350), plage_gain=(1.1, 3),
+        error=(0.6, 2.8), zeeman=(60, 280), plage_gain=(0.83, 2.25),
         rms=(2.5, 9),
     ),
     "sunlike": Kind(
-        teff=(5250, 6150), rotation=(20, 30), shear=(0.1, 0.25), number=(3, 9),
-        area=(0.00016, 0.0006), life=(15, 40), facula_ratio=(3.5, 8), nest_share=(0.2, 0.7),
+        teff=(5250, 6150), rotation=(20, 30), shear=(0.1, 0.25), number=(2.5, 7),
+        area=(0.00016, 0.0006), life=(15, 40), facula_ratio=(3.5, 8), nest_share=(0.35, 0.8),
         latitude=(0.2, 0.4), spot_contrast=(0.45, 0.65), quenching=(0.4, 0.9),
         cycle=(2100, 4800), cycle_chance=1.0, cycle_depth=(0.5, 1.0), network=(5e-4, 1.5e-2),
-        error=(0.5, 1.9), zeeman=(250, 900), plage_gain=(1.2, 4),
+        error=(0.5, 1.9), zeeman=(180, 700), plage_gain=(0.9, 3),
         rms=(0.7, 3.5),
     ),
     "red dwarf": Kind(
-        teff=(3000, 3900), rotation=(21, 85), shear=(0.0, 0.014), number=(3, 8),
+        teff=(3000, 3900), rotation=(21, 85), shear=(0.0, 0.014), number=(2.5, 6),
         area=(0.007, 0.03), life=(120, 600), facula_ratio=(0.3, 1.5), nest_share=(0.7, 1.0),
         latitude=(0.2, 0.9), spot_contrast=(0.25, 0.55), quenching=(0.02, 0.35),
         cycle=(1400, 3100), cycle_chance=0.5, cycle_depth=(0.1, 0.5), network=(1e-5, 1e-3),
-        error=(0.85, 3), zeeman=(20, 120), plage_gain=(1, 3),
+        error=(0.85, 3), zeeman=(20, 120), plage_gain=(0.75, 2.25),
         rms=(1.3, 6.5),
     ),
     "facular": Kind(
-        teff=(4900, 5900), rotation=(22, 43), shear=(0.05, 0.22), number=(3, 8),
-        area=(0.0002, 0.001), life=(22, 60), facula_ratio=(7, 16), nest_share=(0.2, 0.6),
+        teff=(4900, 5900), rotation=(22, 43), shear=(0.05, 0.22), number=(2.5, 6),
+        area=(0.0002, 0.001), life=(22, 60), facula_ratio=(7, 16), nest_share=(0.35, 0.75),
         latitude=(0.2, 0.45), spot_contrast=(0.4, 0.6), quenching=(0.4, 0.8),
         cycle=(1100, 4000), cycle_chance=1.0, cycle_depth=(0.6, 1.0), network=(1.2e-2, 6e-2),
-        error=(0.4, 1.35), zeeman=(200, 700), plage_gain=(1.5, 4),
+        error=(0.4, 1.35), zeeman=(90, 350), plage_gain=(1.12, 3),
         rms=(1.8, 7),
     ),
     "fast spotted": Kind(
-        teff=(4400, 5900), rotation=(4.0, 9.6), shear=(0.005, 0.04), number=(3, 8),
+        teff=(4400, 5900), rotation=(4.0, 9.6), shear=(0.005, 0.04), number=(2.5, 6),
         area=(0.004, 0.016), life=(30, 110), facula_ratio=(0.3, 1.4), nest_share=(0.3, 0.9),
         latitude=(0.3, 1.0), spot_contrast=(0.5, 0.8), quenching=(0.2, 0.8),
         cycle=(1400, 2100), cycle_chance=0.6, cycle_depth=(0.1, 0.4), network=(1e-5, 1e-2),
-        error=(2.8, 8.5), zeeman=(300, 900), plage_gain=(1.3, 4),
+        error=(2.8, 8.5), zeeman=(300, 900), plage_gain=(0.98, 3),
         rms=(17, 66),
     ),
     "calm": Kind(
@@ -88,7 +88,7 @@ KINDS: dict[str, Kind] = {
         area=(0.00005, 0.00015), life=(10, 24), facula_ratio=(4, 8), nest_share=(0.0, 0.4),
         latitude=(0.2, 0.4), spot_contrast=(0.45, 0.65), quenching=(0.3, 0.7),
         cycle=(2900, 4600), cycle_chance=0.6, cycle_depth=(0.3, 0.8), network=(1e-5, 2e-3),
-        error=(0.35, 1.15), zeeman=(150, 600), plage_gain=(1, 3.5),
+        error=(0.35, 1.15), zeeman=(150, 600), plage_gain=(0.75, 2.62),
         rms=(0.31, 1.0),
     ),
     "nested red dwarf": Kind(
@@ -96,7 +96,7 @@ KINDS: dict[str, Kind] = {
         area=(0.01, 0.03), life=(500, 2500), facula_ratio=(0.2, 1.2), nest_share=(0.93, 1.0),
         latitude=(0.2, 1.0), spot_contrast=(0.2, 0.55), quenching=(0.0, 0.35),
         cycle=(1400, 3100), cycle_chance=0.2, cycle_depth=(0.1, 0.4), network=(1e-5, 1e-3),
-        error=(0.9, 3.2), zeeman=(20, 120), plage_gain=(1, 3), one_nest=True,
+        error=(0.9, 3.2), zeeman=(20, 120), plage_gain=(0.75, 2.25), one_nest=True,
         rms=(1.2, 9),
     ),
 }  # fmt: skip
@@ -120,16 +120,16 @@ class Body:
 # temperature (after Liebing et al. 2021, from memory), and width of the mean line.
 _SEQUENCE = np.array(
     [
-        [2900.0, 0.12, 0.15, 1.80, 0.0, 3600.0],
-        [3200.0, 0.22, 0.25, 1.61, 20.0, 3800.0],
-        [3500.0, 0.42, 0.43, 1.50, 50.0, 4000.0],
-        [3850.0, 0.58, 0.58, 1.42, 80.0, 4500.0],
-        [4200.0, 0.66, 0.65, 1.24, 120.0, 5000.0],
-        [4600.0, 0.73, 0.70, 1.05, 160.0, 5300.0],
-        [5000.0, 0.80, 0.77, 0.90, 210.0, 5600.0],
-        [5400.0, 0.90, 0.87, 0.76, 270.0, 6000.0],
-        [5770.0, 1.00, 1.00, 0.65, 330.0, 6500.0],
-        [6200.0, 1.15, 1.18, 0.55, 420.0, 7200.0],
+        [2900.0, 0.12, 0.15, 1.80, 0.0, 3200.0],
+        [3200.0, 0.22, 0.25, 1.61, 20.0, 3400.0],
+        [3500.0, 0.42, 0.43, 1.50, 50.0, 3600.0],
+        [3850.0, 0.58, 0.58, 1.42, 80.0, 4000.0],
+        [4200.0, 0.66, 0.65, 1.24, 120.0, 4400.0],
+        [4600.0, 0.73, 0.70, 1.05, 160.0, 4700.0],
+        [5000.0, 0.80, 0.77, 0.90, 210.0, 4950.0],
+        [5400.0, 0.90, 0.87, 0.76, 270.0, 5300.0],
+        [5770.0, 1.00, 1.00, 0.65, 330.0, 5700.0],
+        [6200.0, 1.15, 1.18, 0.55, 420.0, 6300.0],
     ]
 )
 _TYPES = (

@@ -303,21 +303,22 @@ def _indicators(
         noise = np.hypot(error, extra * np.median(error)) * rng.standard_normal(n)
         return Column(signal + zeros[tools] + noise, error)
 
-    wander = float(rng.uniform(0.003, 0.012))
     plage = activity.plage
-    ca = draw_log(kind.plage_gain, rng)
-    s_signal = s_mean * (
-        1.0 + ca * (plage - plage.mean()) + wander * correlated_noise(campaign.time, 2.0, 1.0, rng)
-    )
+    gain = draw_log(kind.plage_gain, rng)
+    shape = gain * (plage - plage.mean())
+    size = float(np.std(shape))
+    # emergence, small flares and active-network flicker, over within a day or so
+    flicker = correlated_noise(campaign.time, float(rng.uniform(0.3, 1.2)), 1.0, rng)
+    s_signal = s_mean * (1.0 + shape + (0.003 + rng.uniform(0.5, 1.3) * size) * flicker)
     s_error = s_mean * rng.uniform(0.004, 0.013) * quality / np.median(quality)
     # H-alpha: plages fill the line in, filaments deepen it, so its tie to calcium varies
-    filaments = correlated_noise(campaign.time, float(rng.uniform(8, 40)), 1.0, rng)
+    filaments = correlated_noise(campaign.time, float(rng.uniform(1, 6)), 1.0, rng)
     ha_mean = float(rng.uniform(0.45, 0.88)) if red else float(rng.uniform(0.165, 0.235))
-    ha_tie = ca * float(rng.uniform(-0.15, 0.4))
     ha_signal = ha_mean * (
         1.0
-        + ha_tie * (plage - plage.mean())
-        + (0.002 + float(rng.uniform(0.15, 0.6)) * ca * plage.std()) * filaments
+        + rng.uniform(-0.15, 0.38) * shape
+        + (0.002 + rng.uniform(0.15, 0.4) * size) * filaments
+        + (0.002 + rng.uniform(0.05, 0.3) * size) * flicker
     )
     if red:  # flares lift both lines for single exposures
         flare = np.where(rng.random(n) < 0.03, rng.exponential(0.08, n), 0.0)
@@ -326,7 +327,7 @@ def _indicators(
     ha_error = ha_mean * rng.uniform(0.004, 0.010) * quality / np.median(quality)
     columns = {
         "fwhm": finish(
-            line_width + activity.fwhm, rng.uniform(2.0, 2.5) * quality, 40.0, rng.uniform(0.2, 0.8)
+            line_width + activity.fwhm, rng.uniform(2.0, 2.5) * quality, 40.0, rng.uniform(0.4, 1.3)
         ),
         "bis": finish(
             rng.uniform(-40, 40) + activity.bis, 2.0 * quality, 8.0, rng.uniform(0.1, 0.4)
