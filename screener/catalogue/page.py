@@ -2,8 +2,10 @@
 
 from __future__ import annotations
 
+import contextlib
 import json
 import math
+import sqlite3
 from collections.abc import Sequence
 from pathlib import Path
 from typing import Any
@@ -15,8 +17,9 @@ from markupsafe import Markup
 from screener.catalogue.compare import changes
 from screener.catalogue.folder import RunFolder
 from screener.catalogue.progress import clock
+from screener.core import InputFault
 from screener.report.files import write_text
-from screener.store import Store
+from screener.store import Store, StoreError
 from screener.store.reading import counts, current_run, failures, folds, ranked, work_summary
 
 __all__ = ["fold_picture", "page_html", "write_page"]
@@ -24,20 +27,18 @@ __all__ = ["fold_picture", "page_html", "write_page"]
 _WIDTH, _HEIGHT = 96, 32
 
 
-def write_page(store: Store, folder: RunFolder, compare: Path | None = None) -> None:
-    """Write the page of the latest run; with ``compare``, what changed since that run's folder.
-
-    Raises
-    ------
-    InputFault
-        If ``compare`` is no folder of a run.
-    """
+def write_page(store: Store, folder: RunFolder) -> None:
+    """Write the page of the latest run, with what changed since the run it is compared with."""
+    compared = current_run(store).get("compared")
     found = None
-    if compare is not None:
-        with Store(compare / "catalogue.sqlite", read_only=True) as before:
+    if compared is not None:
+        # the earlier run may have been moved away since
+        with (
+            contextlib.suppress(InputFault, StoreError, sqlite3.Error),
+            Store(Path(compared) / "catalogue.sqlite", read_only=True) as before,
+        ):
             found = changes(store, before)
-    html = page_html(store, folder, found, None if compare is None else str(compare))
-    write_text(folder.page, html)
+    write_text(folder.page, page_html(store, folder, found, compared))
 
 
 def page_html(

@@ -225,6 +225,7 @@ class _Run:
             rules_sha256=rules.sha256,
             seed=options.seed,
             depth=options.depth,
+            compared=None if options.compare is None else _text(options.compare.absolute()),
         )
         common: dict[str, str | int] = {
             "version": __version__,
@@ -456,7 +457,7 @@ class _Run:
     def _write_page(self) -> None:
         from screener.catalogue.page import write_page
 
-        write_page(self.store, self.folder, self.options.compare)
+        write_page(self.store, self.folder)
         self._page_time = time.monotonic()
 
 

@@ -114,7 +114,7 @@ def draw_dossier(task: StarTask) -> str:
 
     screening, same = screen_again(task)
     if same is False:
-        return "the star's input gives another verdict by now; run the catalogue again"
+        return "its input gives another verdict by now: screen the star again"
     assert task.folder is not None
     write_dossier(screening, Path(task.folder))
     return ""

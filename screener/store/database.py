@@ -48,6 +48,7 @@ class RunSettings:
     rules_sha256: str
     seed: int
     depth: str
+    compared: str | None = None  # folder of an earlier run, for the page
 
 
 @dataclass(frozen=True)
@@ -126,16 +127,13 @@ class Store:
 
     def _connect(self, read_only: bool) -> sqlite3.Connection:
         name = f"file:{quote(str(self.path.absolute()))}"
-        if read_only:
-            try:
-                connection = self._opened(name + "?mode=ro")
-                connection.execute("SELECT count(*) FROM sqlite_master").fetchone()
-            except sqlite3.OperationalError:
-                # a folder that may not be written to, without the files that WAL needs
-                connection = self._opened(name + "?mode=ro&immutable=1")
-        else:
-            connection = self._opened(name + "?mode=rwc")
-        return connection
+        if not read_only:
+            return self._opened(name + "?mode=rwc")
+        log = self.path.with_name(self.path.name + "-wal")
+        if not log.exists():
+            # nobody writes; without this, a reader leaves the files behind that WAL needs
+            return self._opened(name + "?mode=ro&immutable=1")
+        return self._opened(name + "?mode=ro")
 
     @staticmethod
     def _opened(uri: str) -> sqlite3.Connection:
@@ -179,9 +177,11 @@ class Store:
         with self.transaction() as db:
             row = db.execute(
                 "INSERT INTO run (source, version, rules, rules_sha256, seed, depth, state,"
-                " started_utc, changed_utc) VALUES (?, ?, ?, ?, ?, ?, 'running', ?, ?)"
+                " started_utc, changed_utc, compared)"
+                " VALUES (?, ?, ?, ?, ?, ?, 'running', ?, ?, ?)"
                 " ON CONFLICT (source, version, rules_sha256, seed, depth)"
-                " DO UPDATE SET state = 'running', changed_utc = excluded.changed_utc"
+                " DO UPDATE SET state = 'running', changed_utc = excluded.changed_utc,"
+                " compared = excluded.compared"
                 " RETURNING id",
                 (
                     settings.source,
@@ -192,6 +192,7 @@ class Store:
                     settings.depth,
                     now,
                     now,
+                    settings.compared,
                 ),
             ).fetchone()
         return int(row["id"])

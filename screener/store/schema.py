@@ -37,6 +37,7 @@ CREATE TABLE run (
   state TEXT NOT NULL CHECK (state IN ('running', 'stopped', 'done')),
   started_utc TEXT NOT NULL,
   changed_utc TEXT NOT NULL,
+  compared TEXT,
   UNIQUE (source, version, rules_sha256, seed, depth)
 );
 
@@ -171,6 +172,7 @@ ABOUT: dict[str, dict[str, str]] = {
         "state": "running, stopped (resumes with the same command) or done.",
         "started_utc": "First start, ISO 8601, UTC.",
         "changed_utc": "Last start or end, ISO 8601, UTC.",
+        "compared": "Folder of the earlier run that the page compares with, or null.",
     },
     "star": {
         "": "One row per star, that is per input table.",
@@ -294,12 +296,12 @@ def migrate(connection: sqlite3.Connection) -> int:
 def _statements(script: str) -> list[str]:
     # executescript() commits first, and a migration must be whole or absent
     result, current = [], ""
-    for line in script.splitlines():
-        current += line + "\n"
+    for piece in script.split(";"):
+        current += piece + ";"
         if sqlite3.complete_statement(current):
             result.append(current.strip())
             current = ""
-    if current.strip():
+    if current.strip(" \n;"):
         raise StoreError(f"a migration ends in the middle of a statement: {current.strip()[:60]}")
     return [s for s in result if s]
 
