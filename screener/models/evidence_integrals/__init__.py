@@ -1,0 +1,52 @@
+"""Evidences of n planets on top of correlated noise, by two methods that share no sampling.
+
+``ImportanceSampler`` is the method of choice: all linear parameters and the jitter are integrated
+out and the rest is sampled from an adapted proposal. ``annealed_evidence`` checks it: it samples
+every parameter with the priors as stated.
+"""
+
+from __future__ import annotations
+
+import numpy as np
+
+from screener.models.evidence_integrals.importance import (
+    Effort,
+    ImportanceSampler,
+    importance_ladder,
+)
+from screener.models.evidence_integrals.jitter_nodes import log_evidence_without_planets
+from screener.models.evidence_integrals.problem import (
+    EvidenceEstimate,
+    EvidenceProblem,
+    JeffreysPrior,
+    PlanetPrior,
+)
+from screener.models.evidence_integrals.tempering import AnnealingEffort, annealed_evidence
+
+__all__ = [
+    "AnnealingEffort",
+    "Effort",
+    "EvidenceEstimate",
+    "EvidenceProblem",
+    "ImportanceSampler",
+    "JeffreysPrior",
+    "PlanetPrior",
+    "annealed_evidence",
+    "importance_ladder",
+    "log_evidence",
+    "log_evidence_without_planets",
+]
+
+
+def log_evidence(
+    problem: EvidenceProblem,
+    n_planets: int,
+    rng: np.random.Generator,
+    method: str = "importance",
+) -> EvidenceEstimate:
+    """ln Z of one model; ``method`` is "importance" or "annealing" (one planet or more)."""
+    if method == "importance":
+        return ImportanceSampler(problem, rng).estimate(n_planets)
+    if method == "annealing":
+        return annealed_evidence(problem, n_planets, rng)
+    raise ValueError(f"unknown method {method!r}: importance or annealing")
