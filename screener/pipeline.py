@@ -7,7 +7,8 @@ verdict.
 from __future__ import annotations
 
 from collections.abc import Callable, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
+from functools import partial
 
 import numpy as np
 
@@ -30,9 +31,10 @@ from screener.core import (
     Verdict,
 )
 from screener.curves import products
-from screener.evidence import run_all
+from screener.evidence import own_null, run_all, run_test
 from screener.evidence.case import Case
 from screener.models.kepler import orbit_velocity
+from screener.models.nulls import DrawnSignal, NullDraws, injections, null_draws
 from screener.models.portrait import Portrait, Sighting, paint
 from screener.models.rotation import PeriodDensity, estimate_rotation
 from screener.rules import Graded, RuleSet, grade, load_rules
@@ -50,9 +52,13 @@ def _silent(_stage: str, _share: float) -> None:
 
 @dataclass(frozen=True, eq=False)
 class _Judged:
-    signal: Signal
+    case: Case
     findings: tuple[Finding, ...]
     graded: Graded
+
+    @property
+    def signal(self) -> Signal:
+        return self.case.signal
 
 
 def screen(
@@ -64,6 +70,7 @@ def screen(
     period: float | None = None,
     progress: Progress | None = None,
     with_products: bool = True,
+    workers: int = 1,
 ) -> Screening:
     """Screen one star.
 
@@ -82,6 +89,8 @@ def screen(
         Called with the name of the stage and the share done.
     with_products : bool
         Whether to make the arrays behind the figures as well.
+    workers : int
+        Processes for the draws of the star's own null; does not change the result.
 
     Raises
     ------
@@ -91,7 +100,9 @@ def screen(
     rules = rules or load_rules()
     # two numeric threads on two busy cores make small factorisations hundreds of times slower
     with threadpool_limits(1):
-        return _screen(observations, depth, seed, rules, period, progress or _silent, with_products)
+        return _screen(
+            observations, depth, seed, rules, period, progress or _silent, with_products, workers
+        )
 
 
 def _screen(
@@ -102,6 +113,7 @@ def _screen(
     period: float | None,
     tell: Progress,
     with_products: bool,
+    workers: int,
 ) -> Screening:
     series = observations.series
     tell("rotation period", 0.0)
@@ -166,8 +178,56 @@ def _judge(
             assessment=sighting.assessment,
         )
         findings = run_all(case)
-        judged.append(_Judged(signal, findings, grade(findings, rules, signal)))
+        judged.append(_Judged(case, findings, grade(findings, rules, signal)))
     return judged, known
+
+
+def _judge_draw(star: Star, rules: RuleSet, series: TimeSeries, seed: int) -> list[DrawnSignal]:
+    """Screen one draw at quick depth."""
+    with threadpool_limits(1):
+        rotation, density = estimate_rotation(star, series)
+        portrait = paint(star, series, (), density, Depth.QUICK)
+        judged, _ = _judge(star, series, portrait, rotation, density, rules, Depth.QUICK, seed)
+    return [
+        DrawnSignal(
+            j.signal.orbit.period, j.signal.orbit.semi_amplitude, j.graded.score, j.graded.grade
+        )
+        for j in judged
+    ]
+
+
+def _against_own_null(
+    star: Star,
+    portrait: Portrait,
+    judged: Sequence[_Judged],
+    rules: RuleSet,
+    seed: int,
+    workers: int,
+    tell: Progress,
+) -> list[_Judged]:
+    """Draw the star without planets, screen the draws, and grade again with what they say."""
+    series, depth = judged[0].case.series, judged[0].case.depth
+    judge = partial(_judge_draw, star, rules)
+    at_stake = [j for j in judged if j.graded.grade is not Grade.LIKELY_STELLAR]
+    draws = null_draws(
+        series, portrait, judge, [j.graded.score for j in at_stake], depth=depth, seed=seed,
+        workers=workers, progress=lambda stage, share: tell(stage, 0.78 + 0.13 * share),
+    )  # fmt: skip
+    injected = {}
+    if at_stake:
+        tell("injecting the signal into draws", 0.91)
+        best = max(at_stake, key=lambda j: j.graded.score)
+        injected[best.signal.id] = injections(
+            series, portrait, judge, best.signal.orbit, depth=depth, seed=seed, workers=workers
+        )
+    nulls = NullDraws(draws, injected)
+    out = []
+    for item in judged:
+        case = replace(item.case, nulls=nulls, score=item.graded.score)
+        finding = run_test(own_null, case)
+        findings = tuple(finding if f.test == finding.test else f for f in item.findings)
+        out.append(_Judged(case, findings, grade(findings, rules, item.signal)))
+    return out
 
 
 def _signal(id: str, sighting: Sighting) -> Signal:

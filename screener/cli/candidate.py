@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import json
+import os
 from pathlib import Path
 
 import click
@@ -14,9 +15,13 @@ __all__ = ["command"]
 
 @click.command("candidate")
 @click.argument("table", type=click.Path(path_type=Path))
-@click.option("--star", "sidecar", type=click.Path(path_type=Path), help="Sidecar; default: next to TABLE.")
+@click.option(
+    "--star", "sidecar", type=click.Path(path_type=Path), help="Sidecar; default: next to TABLE."
+)
 @click.option("--period", type=click.FloatRange(min=0.1), help="A period (d) to grade in any case.")
-@click.option("--out", type=click.Path(path_type=Path), help="Folder to write; default: reports/<star>.")
+@click.option(
+    "--out", type=click.Path(path_type=Path), help="Folder to write; default: reports/<star>."
+)
 @click.option(
     "--depth",
     type=click.Choice(["quick", "standard", "deep"]),
@@ -24,8 +29,16 @@ __all__ = ["command"]
     show_default=True,
     help="How much work to spend.",
 )
-@click.option("--seed", type=click.IntRange(min=0), default=1, show_default=True, help="Seed of every random draw.")
-@click.option("--rules", "rule_file", type=click.Path(path_type=Path), help="Rules to lay over the defaults.")
+@click.option(
+    "--seed",
+    type=click.IntRange(min=0),
+    default=1,
+    show_default=True,
+    help="Seed of every random draw.",
+)
+@click.option(
+    "--rules", "rule_file", type=click.Path(path_type=Path), help="Rules to lay over the defaults."
+)
 @click.option("--json", "as_json", is_flag=True, help="Print the verdict as JSON on stdout.")
 def command(
     table: Path,
@@ -40,20 +53,21 @@ def command(
     """Screen the star in TABLE: verdict, dossier and figures."""
     from screener.core import Depth
     from screener.intake import read_star
+
+    observations = read_star(table, sidecar)  # a bad table is refused before the heavy imports
     from screener.pipeline import screen
     from screener.report.dossier import write_dossier
     from screener.report.terminal import print_summary
     from screener.report.verdict_json import verdict_to_dict, write_verdict
     from screener.rules import load_rules
 
-    observations = read_star(table, sidecar)
     rules = load_rules(overlay=rule_file)
     folder = out or Path("reports") / table.name.split(".")[0]
     folder.mkdir(parents=True, exist_ok=True)
     with stage_progress(observations.star.name) as progress:
         screening = screen(
             observations, depth=Depth(depth), seed=seed, rules=rules, period=period,
-            progress=progress,
+            progress=progress, workers=os.cpu_count() or 1,
         )  # fmt: skip
         progress("dossier and figures", 0.98)
         write_verdict(folder / "verdict.json", screening.verdict)

@@ -9,6 +9,7 @@ import numpy as np
 
 from screener.core import Array, Depth, Rotation, Signal, Star, TimeSeries
 from screener.models.assessment import Assessment
+from screener.models.nulls import NullDraws
 from screener.models.rotation import PeriodDensity
 
 __all__ = ["Case"]
@@ -39,6 +40,9 @@ class Case:
         The same as a probability density; None when nothing is known.
     assessment : Assessment or None
         The signal under every noise model.
+    nulls, score : NullDraws or None, float or None
+        The star drawn without planets and screened, and the signal's log-odds before these are
+        known; None at quick depth and on the first pass.
     """
 
     star: Star
@@ -53,6 +57,8 @@ class Case:
     depth: Depth
     seed: int
     assessment: Assessment | None = None
+    nulls: NullDraws | None = None
+    score: float | None = None
 
     def rng(self, test: str) -> np.random.Generator:
         """A random stream of its own for each test and signal, the same in every run."""

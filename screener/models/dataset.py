@@ -39,6 +39,7 @@ class Scaled:
     derivative: tuple[bool, ...]
     cycle_columns: int
     jitter_names: tuple[tuple[str, str], ...]
+    slow: Array  # (n_series, n_obs), the indicators' slow parts in their own units; 0 for velocities
 
 
 def robust_sd(values: Array) -> float:
@@ -134,9 +135,10 @@ def scaled_data(
     """
     n = series.n_obs
     values, errors, names = [series.rv], [series.rv_err], ["rv"]
-    slow = []
+    slow, parts = [], [np.zeros(n)]
     for item in indicators:
         part = long_term_part(series.time, item.value, series.instrument, cycle_shortest)
+        parts.append(part)
         if np.any(part):
             slow.append(part / np.std(part))
         values.append(item.value - part)
@@ -177,7 +179,14 @@ def scaled_data(
     )
     derivative = tuple(name == "rv" or name in _ON_DERIVATIVE for name in names)
     return Scaled(
-        data, scale, centre, tuple(names), derivative, cycle.shape[1], tuple(jitter_names)
+        data,
+        scale,
+        centre,
+        tuple(names),
+        derivative,
+        cycle.shape[1],
+        tuple(jitter_names),
+        np.array(parts),
     )
 
 
