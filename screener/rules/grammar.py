@@ -274,7 +274,7 @@ class _Parser:
         start = self.head
         first = self.quantity()
         if self.head.kind == "order":
-            return self.comparison(first)
+            return self.comparison(first, start)
         if isinstance(first, Number):
             raise ConditionError(
                 "a number by itself is no condition", start.column, "Compare it with a field"
@@ -310,32 +310,22 @@ class _Parser:
             raise ConditionError(f"unknown term {token.text!r}", token.column, cure)
         return Term(token.text, self.terms[token.text])
 
-    def comparison(self, first: Number | Field | Term) -> Condition:
-        start = self.tokens[self.at - 1]
-        quantities: list[Number | Field | Term] = [first]
+    def comparison(self, first: Number | Field | Term, start: _Token) -> Condition:
+        quantities: list[Number | Field] = [_checked(first, start)]
         orders: list[str] = []
         while self.head.kind == "order":
             if len(orders) == 2:
-                raise ConditionError(
-                    "too long a comparison", self.head.column, "Split it with 'and'"
-                )
+                cure = "Split it with 'and'"
+                raise ConditionError("too long a comparison", self.head.column, cure)
             orders.append(self.next().text)
-            start = self.head
-            if start.kind == "text":
-                cure = f"Write: is {start.text}"
-                raise ConditionError("texts are not compared by order", start.column, cure)
-            quantities.append(self.quantity())
-        checked: list[Number | Field] = []
-        for item in quantities:
-            if isinstance(item, Term):
-                raise ConditionError(f"{item.name!r} is a condition, not a number", start.column)
-            if isinstance(item, Field) and (item.name == "outcome" or item.name in _KNOWN):
-                cure = 'Outcomes are asked with "is"; present and failed stand alone'
-                raise ConditionError(f"{item} is not a number", start.column, cure)
-            checked.append(item)
-        if not any(isinstance(q, Field) for q in checked):
+            token = self.head
+            if token.kind == "text":
+                cure = f"Write: is {token.text}"
+                raise ConditionError("texts are not compared by order", token.column, cure)
+            quantities.append(_checked(self.quantity(), token))
+        if not any(isinstance(q, Field) for q in quantities):
             raise ConditionError("compares numbers only", start.column, "Compare a field of a test")
-        return Compare(tuple(checked), tuple(orders))
+        return Compare(tuple(quantities), tuple(orders))
 
     def statement(self, field: Field, start: _Token) -> Is:
         negated = self.take("not")
@@ -356,6 +346,17 @@ class _Parser:
                 cure = did_you_mean(text, SPOKEN) or "Outcomes: " + ", ".join(SPOKEN)
             raise ConditionError(f"no such outcome to ask for: {text!r}", token.column, cure)
         return Is(field, text, negated)
+
+
+def _checked(item: Number | Field | Term, token: _Token) -> Number | Field:
+    """The item, if it may stand in a comparison."""
+    if isinstance(item, Term):
+        cure = "Use it by itself, or compare a field"
+        raise ConditionError(f"{item.name!r} is a condition, not a number", token.column, cure)
+    if isinstance(item, Field) and (item.name == "outcome" or item.name in _KNOWN):
+        cure = 'Outcomes are asked with "is"; present and failed stand alone'
+        raise ConditionError(f"{item} is not a number", token.column, cure)
+    return item
 
 
 def fields_of(node: Condition) -> tuple[Field, ...]:

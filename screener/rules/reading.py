@@ -75,7 +75,8 @@ class _Loader:
             self.add(top, is_overlay=True)
         if base is None:
             raise InputFaults(self.faults)
-        result = self.finish(base, weights)
+        self.check_weights(path, weights)
+        result = self.finish(base, top or base, weights)
         if self.faults or result is None:
             raise InputFaults(self.faults)
         return result
@@ -175,7 +176,16 @@ class _Loader:
                     self.numbers[key] = number
         return found
 
-    def finish(self, base: Source, weights: Mapping[str, float]) -> RuleSet | None:
+    def check_weights(self, path: Path, weights: Mapping[str, float]) -> None:
+        """A fitted weight keeps the sign that its rule states."""
+        for id, weight in weights.items():
+            entry = self.entries["rule"].get(id)
+            word = None if entry is None else entry.data.get("direction")
+            if (word == "planet" and weight < 0.0) or (word == "star" and weight > 0.0):
+                problem = f"the weight {weight:g} of '{id}' has the other sign than its direction"
+                self.faults.append(InputFault(str(path), problem, "Run the calibration again"))
+
+    def finish(self, base: Source, top: Source, weights: Mapping[str, float]) -> RuleSet | None:
         terms = self.read_terms()
         rules = [self.build.rule(e, terms) for e in self.entries["rule"].values()]
         classes = [self.build.prior_class(e, terms) for e in self.entries["class"].values()]
@@ -183,13 +193,13 @@ class _Loader:
         if self.known_tests is not None:
             self.check_tests()
         if not rules:
-            self.faults.append(base.fault((), "there is no rule", "Add a [[rule]]"))
-        self.build.fallbacks(base, [a for a in advice if a is not None])
+            self.faults.append(top.fault((), "there is no rule", "Add a [[rule]]"))
+        self.build.fallbacks(top, [a for a in advice if a is not None])
         numbers = self.numbers
         limits = Thresholds(numbers["planetary_above"], numbers["likely_stellar_below"])
         if limits.likely_stellar_below >= limits.planetary_above and not self.faults:
             problem = "likely_stellar_below must be less than planetary_above"
-            self.faults.append(base.fault(("thresholds",), problem, "Part the two thresholds"))
+            self.faults.append(top.fault(("thresholds",), problem, "Part the two thresholds"))
         if self.faults:
             return None
         name, version = self.labels[0]

@@ -7,6 +7,7 @@ import json
 import math
 from collections.abc import Mapping
 from dataclasses import dataclass
+from functools import cached_property
 
 from screener.core import Grade, RuleEffect
 from screener.rules.grammar import Condition, Field, fields_of, write
@@ -240,7 +241,7 @@ class RuleSet:
                 return rule
         raise KeyError(id)
 
-    @property
+    @cached_property
     def sha256(self) -> str:
         """Hash of everything that can change a verdict; comments and layout do not count."""
         return hashlib.sha256(json.dumps(_content(self), sort_keys=True).encode()).hexdigest()
