@@ -6,9 +6,7 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from screener.core import Array
-
-__all__ = ["KINDS", "Body", "Kind", "body_of", "calcium_of"]
+__all__ = ["KINDS", "Body", "Kind", "body_of", "calcium_of", "draw_even", "draw_log"]
 
 Range = tuple[float, float]
 
@@ -69,7 +67,7 @@ KINDS: dict[str, Kind] = {
     ),
     "facular": Kind(
         teff=(4900, 5900), rotation=(22, 43), shear=(0.05, 0.22), number=(2.5, 6),
-        area=(0.0002, 0.001), life=(22, 60), facula_ratio=(7, 16), nest_share=(0.35, 0.75),
+        area=(0.0002, 0.001), life=(28, 75), facula_ratio=(7, 16), nest_share=(0.45, 0.85),
         latitude=(0.2, 0.45), spot_contrast=(0.4, 0.6), quenching=(0.4, 0.8),
         cycle=(1100, 4000), cycle_chance=1.0, cycle_depth=(0.6, 1.0), network=(1.2e-2, 6e-2),
         error=(0.4, 1.35), zeeman=(90, 350), plage_gain=(1.12, 3),
@@ -114,6 +112,11 @@ class Body:
     blueshift: float  # convective, m/s
     local_fwhm: float  # of the mean line without rotation, m/s
 
+    @property
+    def is_red(self) -> bool:
+        """Whether it is an M dwarf."""
+        return self.teff < 3950.0
+
 
 # Effective temperature, mass, radius, B-V and type along the main sequence, after the table of
 # Pecaut & Mamajek (2013), rounded, from memory. Last two: convective blueshift, which falls with
@@ -121,9 +124,9 @@ class Body:
 _SEQUENCE = np.array(
     [
         [2900.0, 0.12, 0.15, 1.80, 0.0, 3200.0],
-        [3200.0, 0.22, 0.25, 1.61, 20.0, 3400.0],
-        [3500.0, 0.42, 0.43, 1.50, 50.0, 3600.0],
-        [3850.0, 0.58, 0.58, 1.42, 80.0, 4000.0],
+        [3200.0, 0.22, 0.25, 1.61, 8.0, 3400.0],
+        [3500.0, 0.42, 0.43, 1.50, 25.0, 3600.0],
+        [3850.0, 0.58, 0.58, 1.42, 60.0, 4000.0],
         [4200.0, 0.66, 0.65, 1.24, 120.0, 4400.0],
         [4600.0, 0.73, 0.70, 1.05, 160.0, 4700.0],
         [5000.0, 0.80, 0.77, 0.90, 210.0, 4950.0],
@@ -158,7 +161,7 @@ def calcium_of(body: Body, rotation: float, scatter: float) -> tuple[float, floa
     Mamajek & Hillenbrand (2008), S after Noyes et al. (1984). M dwarfs: log R'HK after
     Astudillo-Defru et al. (2017); S from a conversion factor that keeps falling with B-V.
     """
-    if body.teff < 3950.0:
+    if body.is_red:
         log_rhk = min(-1.509 * np.log10(rotation) - 2.55, -4.1) + scatter
         return float(log_rhk), float(10.0 ** (0.55 * (log_rhk + 4.9)) * 0.9)
     x = 1.0 - body.b_minus_v
@@ -185,8 +188,3 @@ def draw_even(pair: Range, rng: np.random.Generator) -> float:
 def draw_log(pair: Range, rng: np.random.Generator) -> float:
     """Even in the logarithm of the range."""
     return float(np.exp(rng.uniform(np.log(pair[0]), np.log(pair[1]))))
-
-
-def spread(values: Array) -> float:
-    """Standard deviation, zero for fewer than two values."""
-    return float(np.std(values)) if values.size > 1 else 0.0

@@ -88,23 +88,25 @@ def draw_campaign(plan: Plan, rng: np.random.Generator) -> Campaign:
     end = middle + (plan.n_seasons - 1) * _YEAR + 0.5 * length
     instruments = _draw_instruments(plan, start, end, rng)
     in_runs = rng.random() < 0.3
-    times, labels = [], []
-    for k, tool in enumerate(instruments):
+    times, labels, used = [], [], []
+    for tool in instruments:
         wanted = max(round(plan.n_obs * tool.share), 8)
         nights = _nights(tool, middle, length, plan.n_seasons, in_runs, rng)
         if nights.size == 0:
             continue
         exposures = _exposures(tool, nights, wanted, middle, rng)
         times.append(exposures)
-        labels.append(np.full(exposures.size, k))
+        labels.append(np.full(exposures.size, len(used)))
+        used.append(tool)
     time, label = np.concatenate(times), np.concatenate(labels)
     order = np.argsort(time)
+    order = order[np.diff(time[order], prepend=-np.inf) > 0.003]  # no two within five minutes
     time, label = time[order], label[order].astype(np.intp)
     seeing = np.exp(0.2 * rng.standard_normal(time.size))
     poor = rng.random(time.size) < 0.04  # cirrus, high airmass
     seeing[poor] *= rng.uniform(1.4, 2.5, int(poor.sum()))
-    quoted = np.array([i.error for i in instruments])[label] * seeing
-    return Campaign(np.round(time, 5), label, quoted, instruments, middle, length)
+    quoted = np.array([i.error for i in used])[label] * seeing
+    return Campaign(np.round(time, 5), label, quoted, tuple(used), middle, length)
 
 
 _FAMILIES = (
