@@ -6,6 +6,7 @@ from pathlib import Path
 
 import click
 
+from screener.synthetic.demo import write_demo
 from screener.synthetic.population import MIXES, write_population
 
 __all__ = ["main"]
@@ -27,6 +28,14 @@ def population(out: Path, stars: int, seed: int, first: int, mix: str) -> None:
     truth = write_population(out, stars, seed, first, mix)
     planets = sum(len(star["planets"]) for star in truth)
     click.echo(f"{len(truth)} stars with {planets} planets in {out}")
+
+
+@main.command()
+@click.argument("out", type=click.Path(path_type=Path, file_okay=False))
+def demo(out: Path) -> None:
+    """Write the demo scenario, an invented survey of four stars, to OUT."""
+    for star in write_demo(out):
+        click.echo(f"{star.name}: {star.rv.size} exposures, {star.truth['tale']}")
 
 
 if __name__ == "__main__":

@@ -107,7 +107,7 @@ def _chromosphere(
     filaments = correlated_noise(time, float(rng.uniform(1, 6)), 1.0, rng)
     halpha = (
         1.0
-        + rng.uniform(-0.15, 0.38) * shape
+        + rng.uniform(-0.15, 0.5) * shape
         + (0.002 + rng.uniform(0.15, 0.4) * size) * filaments
         + (0.002 + rng.uniform(0.05, 0.3) * size) * flicker
     )

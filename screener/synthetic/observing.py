@@ -88,7 +88,9 @@ def draw_campaign(plan: Plan, rng: np.random.Generator) -> Campaign:
     end = middle + (plan.n_seasons - 1) * _YEAR + 0.5 * length
     instruments = _draw_instruments(plan, start, end, rng)
     in_runs = rng.random() < 0.3
-    times, labels, used = [], [], []
+    times: list[Array] = []
+    labels: list[IntArray] = []
+    used: list[Instrument] = []
     for tool in instruments:
         wanted = max(round(plan.n_obs * tool.share), 8)
         nights = _nights(tool, middle, length, plan.n_seasons, in_runs, rng)
@@ -96,12 +98,12 @@ def draw_campaign(plan: Plan, rng: np.random.Generator) -> Campaign:
             continue
         exposures = _exposures(tool, nights, wanted, middle, rng)
         times.append(exposures)
-        labels.append(np.full(exposures.size, len(used)))
+        labels.append(np.full(exposures.size, len(used), dtype=np.intp))
         used.append(tool)
     time, label = np.concatenate(times), np.concatenate(labels)
     order = np.argsort(time)
     order = order[np.diff(time[order], prepend=-np.inf) > 0.003]  # no two within five minutes
-    time, label = time[order], label[order].astype(np.intp)
+    time, label = time[order], label[order]
     seeing = np.exp(0.2 * rng.standard_normal(time.size))
     poor = rng.random(time.size) < 0.04  # cirrus, high airmass
     seeing[poor] *= rng.uniform(1.4, 2.5, int(poor.sum()))
