@@ -30,12 +30,14 @@ __all__ = [
     "information_deficit",
     "log_likelihood",
     "orbit_hypothesis",
+    "orbit_process",
     "quasi_periodic",
 ]
 
 _SIDEREAL_DAY = 1.0027379  # cycles per day
 _YEAR = 365.25
 _MONTH = 29.530589
+_SPOT_TURNS, _SPOT_SPREAD = 1.5, 0.7  # lifetime of a pattern in turns, and its spread in ln
 _LIVE = math.log(1000.0)  # an alias that fits worse by more is dead
 
 
@@ -135,28 +137,33 @@ def forecast(hypothesis: Hypothesis, data: Velocities, time: Array, sd: Array) -
     return Forecast(np.asarray(mean), matrix)
 
 
-def _basis(orbit: Orbit, baseline: float, middle: float, time: Array) -> Array:
-    """Columns B with prior covariance B B^T for an orbit known about as well as data make it.
+def orbit_process(orbit: Orbit, baseline: float) -> Callable[[Array, Array], Array]:
+    """Covariance of the velocities of an orbit whose elements are known about as well as fitted.
 
-    The two linear columns (width 2K), their change with frequency (width 0.3 / baseline, or the
-    error if it is larger) and the first harmonic (width of the error of e, at least 0.1, times K).
+    The two coefficients in which the velocity is linear have a width of K, the first harmonic one
+    of K sigma_e (at least 0.1 K). An error of the frequency makes the phase forgotten as
+    exp[-(2 pi sigma_f tau)^2 / 2], the mean of cos(2 pi delta_f tau) over the error: unlike a
+    linear expansion in the period it stays bounded when a whole turn is lost between seasons.
     """
     ecc = min(orbit.eccentricity, 0.9)
-
-    def linear(t: Array) -> Array:
-        return orbit_columns(t, orbit.period, ecc, orbit.time_peri)
-
-    step = 1e-4 * orbit.period
-    change = (linear(time + step) - linear(time - step)) / (2 * step) * orbit.period
-    frequency_err = 0.3 / max(baseline, orbit.period)
+    ecc_err = min(max(orbit.eccentricity_err or 0.0, 0.1), 0.3)
     if orbit.period_err:
-        frequency_err = min(max(frequency_err, orbit.period_err / orbit.period**2), 1 / baseline)
-    change = change * ((time - middle) * frequency_err)[:, None]
-    phase = 4 * np.pi * (time - middle)[:, None] / orbit.period
-    ecc_err = max(orbit.eccentricity_err or 0.0, 0.1)
-    harmonic = np.concatenate([np.cos(phase), np.sin(phase)], axis=1) * min(ecc_err, 0.3)
-    k = orbit.semi_amplitude
-    return np.asarray(np.concatenate([2 * k * linear(time), k * change, k * harmonic], axis=1))
+        frequency_err = min(orbit.period_err / orbit.period**2, 0.3 / baseline)
+    else:
+        frequency_err = 0.1 / baseline
+
+    def columns(time: Array) -> Array:
+        phase = 4 * np.pi * (time - orbit.time_peri)[:, None] / orbit.period
+        harmonic = np.concatenate([np.cos(phase), np.sin(phase)], axis=1) * ecc_err
+        linear = orbit_columns(time, orbit.period, ecc, orbit.time_peri)
+        return np.asarray(orbit.semi_amplitude * np.concatenate([linear, harmonic], axis=1))
+
+    def covariance(one: Array, two: Array) -> Array:
+        lag = one[:, None] - two[None, :]
+        memory = np.exp(-0.5 * (2 * np.pi * frequency_err * lag) ** 2)
+        return np.asarray(memory * (columns(one) @ columns(two).T))
+
+    return covariance
 
 
 def activity_hypothesis(
@@ -165,18 +172,21 @@ def activity_hypothesis(
     """The star alone: the likeliest quasi-periodic process over a small grid.
 
     ``periods`` (d) are tried with decay times of 0.7 to 6 periods (10 to 300 d), two degrees of
-    smoothness and three amplitudes about the scatter. Returns the hypothesis and its amplitude,
-    period, decay time and smoothness.
+    smoothness and three amplitudes about the scatter. Spots live for one to a few turns (Giles,
+    Collier Cameron & Haywood 2017, MNRAS 472, 1618), so decay times carry a lognormal prior about
+    1.5 turns, without which every planet is matched best by a star that never changes. Returns the
+    hypothesis (prior included in its likelihood) and amplitude, period, decay time, smoothness.
     """
     scatter = float(np.std(data.rv))
     excess = math.sqrt(max(scatter**2 - float(np.median(data.sd)) ** 2, 0.1 * scatter**2))
     best: tuple[float, tuple[float, float, float, float]] | None = None
     for period, turns, smooth, scale in product(
-        periods, (0.7, 2.0, 6.0), (0.4, 0.9), (0.75, 1.1, 1.6)
+        periods, (0.7, 1.5, 3.0, 6.0), (0.4, 0.9), (0.75, 1.1, 1.6)
     ):
         decay = min(max(turns * period, 10.0), 300.0)
         shape = (scale * excess, period, decay, smooth)
         value = log_likelihood(quasi_periodic(*shape), data)
+        value -= 0.5 * (math.log(turns / _SPOT_TURNS) / _SPOT_SPREAD) ** 2
         if best is None or value > best[0]:
             best = (value, shape)
     if best is None:
@@ -196,20 +206,18 @@ def orbit_hypothesis(
     """An orbit, and under it as much activity (of the given shape) as is likeliest.
 
     ``shape`` is (amplitude, period, decay time, smoothness) of the process that would explain the
-    velocities without the orbit; none, a quarter, a half or all of its amplitude are tried.
+    velocities without the orbit; none, a quarter and a half of its amplitude are tried. More would
+    no longer be the hypothesis that the orbit makes the signal.
     """
-    baseline = float(np.ptp(data.time))
-    middle = float(np.mean(data.time))
+    wave = orbit_process(orbit, max(float(np.ptp(data.time)), orbit.period))
     best: Hypothesis | None = None
-    for share in (0.0, 0.25, 0.5, 1.0):
+    for share in (0.0, 0.25, 0.5):
         star = quasi_periodic(share * shape[0], *shape[1:])
 
         def covariance(
             one: Array, two: Array, star: Callable[[Array, Array], Array] = star
         ) -> Array:
-            b_1 = _basis(orbit, baseline, middle, one)
-            b_2 = b_1 if one is two else _basis(orbit, baseline, middle, two)
-            return np.asarray(star(one, two) + b_1 @ b_2.T)
+            return np.asarray(star(one, two) + wave(one, two))
 
         value = log_likelihood(covariance, data)
         if best is None or value > best.log_likelihood:
@@ -239,8 +247,15 @@ def alias_orbits(orbit: Orbit, data: Velocities, n_aliases: int = 2) -> list[Orb
         apart = all(abs(trial - other) > resolution for other in chosen)
         if own - gain < _LIVE and apart and len(chosen) < n_aliases:
             chosen.append(trial)
+    frequency_err = (orbit.period_err or 0.0) * frequency**2
     return [
-        replace(orbit, period=1 / f, eccentricity=0.0, period_err=None, eccentricity_err=None)
+        replace(
+            orbit,
+            period=1 / f,
+            eccentricity=0.0,
+            period_err=frequency_err / f**2 or None,
+            eccentricity_err=None,
+        )
         for f in chosen
     ]
 

@@ -12,14 +12,13 @@ from typing import Any
 
 import numpy as np
 
-from screener.core import Array, Indicator, Orbit, Star
+from screener.core import Array, Indicator, IntArray, Orbit, Star
 from screener.system.hypotheses import (
     Forecast,
     Hypothesis,
     Velocities,
     activity_hypothesis,
     alias_orbits,
-    bhattacharyya,
     divergence,
     forecast,
     information_deficit,
@@ -27,7 +26,6 @@ from screener.system.hypotheses import (
 )
 from screener.system.measurements import ExtraMeasurement, extra_measurements
 from screener.system.observability import (
-    NightTimes,
     find_site,
     nights_from_data,
     nights_from_site,
@@ -46,7 +44,6 @@ __all__ = [
 
 THRESHOLD = math.log(100.0)  # natural log-odds at which a question counts as settled
 _MAX_DATA = 400
-_MAX_NIGHTS = 240
 _MAX_SOUGHT = 30
 _MIN_WEIGHT = 1e-3
 
@@ -122,44 +119,76 @@ def live_hypotheses(
     ], shape
 
 
-def order_nights(
-    forecasts: Sequence[Forecast], weights: Array, n_ranked: int
-) -> tuple[list[int], Array]:
-    """Indices of nights, each the one that leaves least unknown given those before it.
+class _Growing:
+    """A normal restricted to a growing set of rows: what each further row would add.
 
-    Greedy in the bound of ``information_deficit``; the second value is the information of every
-    night alone (nat), shape (n_nights,).
+    A pivoted Cholesky factor is extended by one row at a time, so that a step costs n_slots times
+    the number of rows chosen instead of a factorisation for every candidate.
     """
-    n_nights = forecasts[0].mean.size
+
+    def __init__(self, covariance: Array, difference: Array | None = None) -> None:
+        self.covariance = covariance
+        self.variance = np.diag(covariance).copy()  # of each row given those chosen
+        self.rest = np.zeros_like(self.variance) if difference is None else difference.copy()
+        self.rows = np.zeros((0, self.variance.size))
+        self.log_det = 0.0
+        self.square = 0.0  # d^T S^-1 d over the rows chosen
+
+    def add(self, row: int) -> None:
+        scale = math.sqrt(self.variance[row])
+        new = (self.covariance[row] - self.rows[:, row] @ self.rows) / scale
+        step = self.rest[row] / scale
+        self.log_det += math.log(self.variance[row])
+        self.square += step**2
+        self.rest = self.rest - step * new
+        self.variance = np.maximum(self.variance - new**2, 1e-12 * self.covariance[row, row])
+        self.rows = np.vstack([self.rows, new])
+
+    def log_dets(self) -> Array:
+        return np.asarray(self.log_det + np.log(self.variance))
+
+    def squares(self) -> Array:
+        return np.asarray(self.square + self.rest**2 / self.variance)
+
+
+def order_nights(
+    forecasts: Sequence[Forecast], weights: Array, n_ranked: int, night: IntArray | None = None
+) -> tuple[list[int], Array]:
+    """Indices of slots, each the one that leaves least unknown given those before it.
+
+    Greedy in the bound of ``information_deficit``, one slot a night (``night`` numbers them, each
+    slot its own night by default). The second value is the information of every slot alone (nat),
+    shape (n_slots,).
+    """
+    n_slots, n_hyp = forecasts[0].mean.size, len(forecasts)
+    night = np.arange(n_slots) if night is None else night
+    single = [_Growing(f.covariance) for f in forecasts]
+    pairs = {
+        (i, j): _Growing(
+            0.5 * (forecasts[i].covariance + forecasts[j].covariance),
+            forecasts[i].mean - forecasts[j].mean,
+        )
+        for i in range(n_hyp)
+        for j in range(i)
+    }
+    free = np.ones(n_slots, dtype=bool)
     chosen: list[int] = []
-    alone = np.zeros(n_nights)
-    for step in range(min(n_ranked, n_nights)):
-        deficit = _deficits(forecasts, weights, chosen)
-        if step == 0:
+    alone = np.zeros(n_slots)
+    while free.any() and len(chosen) < n_ranked:
+        distances = np.zeros((n_hyp, n_hyp, n_slots))
+        for (i, j), pair in pairs.items():
+            own = 0.5 * (single[i].log_dets() + single[j].log_dets())
+            distances[i, j] = pair.squares() / 8 + 0.5 * (pair.log_dets() - own)
+            distances[j, i] = distances[i, j]
+        deficit = information_deficit(weights, distances)
+        if not chosen:
             alone = -float(np.sum(weights * np.log(weights))) - deficit
-        deficit[chosen] = np.inf
-        chosen.append(int(np.argmin(deficit)))
+        best = int(np.argmin(np.where(free, deficit, np.inf)))
+        chosen.append(best)
+        free &= night != night[best]
+        for part in (*single, *pairs.values()):
+            part.add(best)
     return chosen, np.maximum(alone, 0.0)
-
-
-def _deficits(forecasts: Sequence[Forecast], weights: Array, chosen: list[int]) -> Array:
-    """What would stay unknown with each night added to those chosen, shape (n_nights,)."""
-    n_nights, n_hyp = forecasts[0].mean.size, len(forecasts)
-    trial = np.array([[*chosen, night] for night in range(n_nights)])
-    # a night that is chosen already would make the matrix singular; it is ruled out afterwards
-    free = np.ones(n_nights, dtype=bool)
-    free[chosen] = False
-    index = trial[free]
-    means = [f.mean[index] for f in forecasts]
-    matrices = [f.covariance[index[:, :, None], index[:, None, :]] for f in forecasts]
-    distances = np.zeros((n_hyp, n_hyp, index.shape[0]))
-    for i in range(n_hyp):
-        for j in range(i):
-            value = bhattacharyya(means[i], matrices[i], means[j], matrices[j])
-            distances[i, j] = distances[j, i] = value
-    result = np.full(n_nights, np.inf)
-    result[free] = information_deficit(weights, distances)
-    return result
 
 
 def _expected_log_odds(
@@ -174,19 +203,6 @@ def _expected_log_odds(
         s = (star.mean[rows], star.covariance[square])
         values.append(min(log_odds + divergence(*p, *s), -log_odds + divergence(*s, *p)))
     return values
-
-
-def _thin(nights: NightTimes) -> NightTimes:
-    """At most ``_MAX_NIGHTS`` of them, evenly: neighbours tell nearly the same."""
-    rows = np.unique(np.linspace(0, nights.time.size - 1, _MAX_NIGHTS).astype(int))
-    rows = rows[rows < nights.time.size]
-    return NightTimes(
-        nights.time[rows],
-        nights.altitude[rows],
-        nights.moon_distance[rows],
-        nights.moon_lit[rows],
-        nights.sentence,
-    )
 
 
 def rank_nights(
@@ -253,13 +269,12 @@ def rank_nights(
         return NightPlan(
             (), None, threshold, (), (), name, "No usable night: the star never stands well."
         )
-    nights = _thin(nights)
     data = everything.latest(_MAX_DATA)
     hypotheses, shape = live_hypotheses(data, orbit, rotation_period)
     new_sd = np.full(nights.time.size, float(np.median(data.sd)))
     forecasts = [forecast(h, data, nights.time, new_sd) for h in hypotheses]
     weights = np.array([h.weight for h in hypotheses])
-    chosen, alone = order_nights(forecasts, weights, max(n_ranked, _MAX_SOUGHT))
+    chosen, alone = order_nights(forecasts, weights, max(n_ranked, _MAX_SOUGHT), nights.night)
     gains = _expected_log_odds(forecasts[0], forecasts[-1], chosen, log_odds)
     needed = next((k + 1 for k, g in enumerate(gains) if g >= threshold), None)
     table = tuple(

@@ -96,8 +96,35 @@ def test_order_prefers_the_night_where_the_forecasts_differ() -> None:
         [Forecast(mean, flat), Forecast(np.zeros(5), flat)], np.array([0.5, 0.5]), 3
     )
     assert ranked == [3, 4, 1]
+    # one slot a night: 3 and 4 share theirs
+    night = np.array([0, 1, 2, 3, 3])
+    shared, _ = order_nights(
+        [Forecast(mean, flat), Forecast(np.zeros(5), flat)], np.array([0.5, 0.5]), 5, night
+    )
+    assert shared[:2] == [3, 1] and 4 not in shared and len(shared) == 4
     assert int(np.argmax(alone)) == 3
     assert alone[0] == pytest.approx(0.0, abs=1e-12)
+
+
+def test_greedy_steps_agree_with_whole_matrices() -> None:
+    """Against the distance computed from scratch for every candidate."""
+    rng = np.random.default_rng(6)
+    forecasts = []
+    for _ in range(3):
+        root = rng.normal(size=(12, 12))
+        forecasts.append(Forecast(rng.normal(size=12), root @ root.T + np.eye(12)))
+    weights = np.array([0.5, 0.3, 0.2])
+    got, _ = order_nights(forecasts, weights, 5)
+    chosen: list[int] = []
+    for _ in range(5):
+        best = (np.inf, -1)
+        for row in sorted(set(range(12)) - set(chosen)):
+            rows = np.array([*chosen, row])
+            parts = [(f.mean[rows], f.covariance[np.ix_(rows, rows)]) for f in forecasts]
+            b = np.array([[float(bhattacharyya(*p, *q)) for q in parts] for p in parts])
+            best = min(best, (float(information_deficit(weights, b)), row))
+        chosen.append(best[1])
+    assert got == chosen
 
 
 def test_daily_alias_of_a_nightly_series_is_live() -> None:
@@ -120,6 +147,8 @@ def test_nights_follow_the_season_of_the_right_ascension() -> None:
     star = Star("s", ra_deg=180.0, dec_deg=-10.0)
     start = 2459215.5  # 2021-01-01
     nights = nights_from_site(star, SITES["paranal"], start, 365)
+    assert np.all(nights.altitude > 30)
+    nights = nights.select(nights.best)
     day = nights.time - start
     assert np.count_nonzero(np.abs(day - 79) < 20) > 30
     assert np.count_nonzero(np.abs(day - 265) < 20) == 0
@@ -128,7 +157,6 @@ def test_nights_follow_the_season_of_the_right_ascension() -> None:
     hour = 24 * ((nights.time[near] - 0.5) % 1)
     assert abs(hour - 4.7) < 1.0
     assert nights.altitude[near] == pytest.approx(90 - abs(-10 + 24.627), abs=0.5)
-    assert np.all(nights.altitude > 30)
 
 
 def test_the_moon_is_full_when_the_calendar_says_so() -> None:
@@ -146,8 +174,17 @@ def test_nights_without_coordinates_keep_to_the_seasons_of_the_data() -> None:
     nights = nights_from_data(times, T0 + 400, 365)
     phase = (nights.time - T0) % 365.25
     assert np.all((phase < 112) | (phase > 350))
-    assert nights.time.size > 100
+    assert nights.time.size > 100 and nights.best.all()
     np.testing.assert_allclose(nights.time % 1.0, times[0] % 1.0, atol=1e-6)
+
+
+def test_nights_without_coordinates_offer_the_hours_seen_in_the_data() -> None:
+    """Early, best and late, also where they straddle the change of date."""
+    times = T0 + 0.5 + np.arange(100.0) + np.tile([-0.12, 0.0, 0.12, 0.0, 0.0], 20)
+    nights = nights_from_data(times, T0 + 400, 40)
+    hours = np.unique(np.round(nights.time % 1.0, 3))
+    np.testing.assert_allclose(hours, [0.0, 0.12, 0.88], atol=1e-3)
+    assert np.count_nonzero(nights.best) == np.unique(nights.night).size
 
 
 def test_sites_by_name_coordinates_and_typo() -> None:
