@@ -114,11 +114,15 @@ class RunFolder:
         Raises
         ------
         InputFault
-            If the name would lead out of the run's folder, or a link stands in its place.
+            If the name would lead out of the run's folder, or a link or a file stands in its
+            place.
         """
         folder = self.path / name
-        if folder.parent != self.path or name in ("", ".", "..") or folder.is_symlink():
-            raise InputFault(str(folder), "is no folder of ours", "Remove what stands there")
+        inside = folder.parent == self.path and name not in ("", ".", "..")
+        if not inside or folder.is_symlink() or (folder.exists() and not folder.is_dir()):
+            raise InputFault(
+                str(folder), "a file or a link stands where the star's folder belongs", "Remove it"
+            )
         return folder
 
     def verdict_sha256(self, name: str) -> str | None:

@@ -59,6 +59,8 @@ class _Worker:
     born: float = field(default_factory=time.monotonic)
     ready: bool = False
     task: str | None = None
+    payload: Any = None
+    begun: bool = False  # whether the worker said that it has the task in hand
     start: float = 0.0
     peak: float = 0.0  # MB
 
@@ -137,7 +139,8 @@ class LocalPool:
         for worker in self._workers:
             if self._waiting and worker.ready and worker.task is None:
                 task, payload = self._waiting.pop(0)
-                worker.task, worker.start = task, time.monotonic()
+                worker.task, worker.payload, worker.begun = task, payload, False
+                worker.start = time.monotonic()
                 # a worker that died in this moment is noticed at the next look
                 with contextlib.suppress(OSError):
                     worker.connection.send((task, payload))
@@ -191,13 +194,17 @@ class LocalPool:
             self._failed_starts = 0
             self.start_seconds.append(time.monotonic() - worker.born)
             return []
-        worker.task = None
+        if message[0] == "started":
+            worker.begun = True
+            return []
+        worker.task = worker.payload = None
         if message[0] == "done":
             _, task, result, seconds, peak = message
             worker.peak = max(worker.peak, peak)
             return [Done(task, result, seconds, worker.peak)]
         _, task, kind, reason, seconds, detail = message
         if kind == "memory":
+            self._drop(worker)  # it ends by itself, and must not take another star along
             return [self._memory_failure(task, seconds)]
         return [Failed(task, kind, reason, seconds, detail=detail)]
 
@@ -205,17 +212,23 @@ class LocalPool:
         limit = self.limits.memory
         return Failed(task, "memory", f"needed more than {limit:.0f} MB of memory", seconds, limit)
 
+    def _drop(self, worker: _Worker) -> None:
+        worker.end()
+        self._workers.remove(worker)
+
     def _gone(self, worker: _Worker) -> list[Event]:
         """A worker closed its end: it is dead or dying."""
         with contextlib.suppress(subprocess.TimeoutExpired):
             worker.process.wait(timeout=2.0)
         code = worker.process.poll()
-        worker.end()
-        self._workers.remove(worker)
-        if worker.task is not None:
+        self._drop(worker)
+        if worker.task is not None and not worker.begun:
+            self._waiting.insert(0, (worker.task, worker.payload))  # not this star's fault
+            self._failed_start(_cause_of_death(code))
+        elif worker.task is not None:
             seconds = time.monotonic() - worker.start
             return [Failed(worker.task, "crash", _cause_of_death(code), seconds)]
-        if not worker.ready:
+        elif not worker.ready:
             self._failed_start(_cause_of_death(code))
         return []
 
@@ -232,15 +245,13 @@ class LocalPool:
         for worker in list(self._workers):
             if not worker.ready:
                 if now - worker.born > _START_LIMIT:
-                    worker.end()
-                    self._workers.remove(worker)
+                    self._drop(worker)
                     self._failed_start(f"not ready after {_START_LIMIT:.0f} s")
                 continue
             memory = worker.memory()
             if worker.task is None:
                 if memory > 0.8 * self.limits.memory:  # would fail the next star for this one's
-                    worker.end()
-                    self._workers.remove(worker)
+                    self._drop(worker)
                 continue
             seconds = now - worker.start
             late, large = seconds > self.limits.time, memory > self.limits.memory
@@ -251,8 +262,7 @@ class LocalPool:
             else:
                 reason = f"took longer than {self.limits.time:g} s"
                 found.append(Failed(worker.task, "time", reason, seconds, self.limits.time))
-            worker.end()
-            self._workers.remove(worker)
+            self._drop(worker)
         return found
 
 

@@ -28,7 +28,7 @@ from screener.catalogue.pool import LocalPool
 from screener.catalogue.progress import LogFile, Tally, Watch, clock
 from screener.catalogue.sources import StarInput, find_stars
 from screener.catalogue.work import DRAW, SCREEN
-from screener.core import ScreenerError
+from screener.core import InputFault, ScreenerError
 from screener.rules import load_rules
 from screener.store import RunSettings, StarRow, Store, WorkRow, grade_of
 from screener.store.database import Planned
@@ -238,7 +238,7 @@ class _Run:
         for star in self.stars:
             self._check_stop()
             content = content_of(star)
-            if not content.complete:
+            if not content.complete or self._folder_fault(star) is not None:
                 unread.add(star.name)
             key = work_key(star, content, common)
             estimate = estimate_seconds(content, options.depth)
@@ -256,9 +256,22 @@ class _Run:
                 continue
             if state.state != "waiting":
                 self.store.again(star.name)
+            fault = self._folder_fault(star)
+            if fault is not None:
+                self.store.record_failure(star.name, "input", fault, final=True)
+                self._say(f"{star.name}: failed, {fault}")
+                continue
             attempts = state.attempts if state.state == "waiting" else 0
             self._queue(_Item(star, work.estimate, attempts, work.table_sha256))
         return run_id
+
+    def _folder_fault(self, star: StarInput) -> str | None:
+        """What keeps the star from having a folder, or None."""
+        try:
+            self.folder.star(star.name)
+        except InputFault as fault:
+            return str(fault)
+        return None
 
     def _is_settled(self, star: StarInput, state: Planned, unread: bool) -> bool:
         """Whether nothing is left to do for a star."""

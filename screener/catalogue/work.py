@@ -14,12 +14,27 @@ from pathlib import Path
 from screener.catalogue.messages import StarTask, WorkResult
 from screener.core import Array, Depth, Fold, Products, Screening, SignalVerdict
 
-__all__ = ["DRAW", "SCREEN", "binned_fold", "draw_dossier", "screen_again", "screen_star"]
+__all__ = [
+    "DRAW",
+    "SCREEN",
+    "binned_fold",
+    "draw_dossier",
+    "preload",
+    "screen_again",
+    "screen_star",
+]
 
 SCREEN = "screener.catalogue.work:screen_star"
 DRAW = "screener.catalogue.work:draw_dossier"
 
 N_BINS = 30
+
+
+def preload() -> None:
+    """Import what screening needs, and raise here what would else be each star's fault."""
+    import screener.intake
+    import screener.pipeline
+    import screener.report.verdict_json  # noqa: F401
 
 
 def _screen(task: StarTask) -> Screening:
