@@ -21,7 +21,7 @@ from screener.rules.population import BoolArray, IntArray
 
 __all__ = ["Design", "Fit", "fit_weights", "fold_of_stars", "logistic", "recalibrate"]
 
-STRENGTHS = tuple(float(s) for s in np.geomspace(0.1, 100.0, 9))
+STRENGTHS = tuple(float(s) for s in np.geomspace(0.1, 100.0, 7))
 KINDS = ("ridge", "lasso")
 SCALE_RANGE = (0.5, 1.5)
 MIN_ACTIVE = 25  # signals on which a rule must count before its weight is fitted
@@ -78,7 +78,9 @@ def fold_of_stars(n_stars: int, n_folds: int, rng: np.random.Generator) -> IntAr
     return np.asarray(rng.permutation(fold))
 
 
-def logistic(design: Design, rows: BoolArray, kind: str, strength: float) -> tuple[Array, float]:
+def logistic(
+    design: Design, rows: BoolArray, kind: str, strength: float, start: Array | None = None
+) -> tuple[Array, float]:
     """Weights (signed) and intercept from some of the signals.
 
     Parameters
@@ -86,6 +88,8 @@ def logistic(design: Design, rows: BoolArray, kind: str, strength: float) -> tup
     rows : bool array, shape (n,)
     kind : {"ridge", "lasso"}
     strength : float
+    start : array, shape (n_rules,), optional
+        Weights to start from.
 
     Raises
     ------
@@ -94,7 +98,10 @@ def logistic(design: Design, rows: BoolArray, kind: str, strength: float) -> tup
     """
     x = design.x[rows] * design.sign
     y, cost, offset = design.y[rows], design.cost[rows], design.offset[rows]
-    n_rules = x.shape[1]
+    n_rules, total = x.shape[1], float(cost.sum())
+    # about the mean, the intercept goes its own way and the optimiser needs far fewer steps
+    mean = cost @ x / total
+    x -= mean
 
     def loss(theta: Array) -> tuple[float, Array]:
         eta = offset + theta[0] + x @ theta[1:]
@@ -108,34 +115,48 @@ def logistic(design: Design, rows: BoolArray, kind: str, strength: float) -> tup
         else:
             value += strength * float(u.sum())
             gradient[1:] += strength
-        return value, gradient
+        return value / total, gradient / total
 
-    start = np.concatenate([[0.0], np.full(n_rules, 0.1)])
+    first = np.full(n_rules, 0.1) if start is None else start * design.sign
     bounds = [(-50.0, 50.0)] + [(0.0, 50.0)] * n_rules
-    options = {"maxiter": 2000, "maxfun": 20000, "ftol": 1e-12, "gtol": 1e-6}
     found = optimize.minimize(
-        loss, start, jac=True, method="L-BFGS-B", bounds=bounds, options=options
+        loss,
+        np.concatenate([[0.0], first]),
+        jac=True,
+        method="L-BFGS-B",
+        bounds=bounds,
+        options={"maxiter": 2000, "maxfun": 20000, "maxcor": 20, "ftol": 1e-11, "gtol": 1e-7},
     )
     if not found.success:
         raise NumericalError(
             f"the weights did not converge ({kind}, strength {strength:g}, {y.size} signals): "
             f"{found.message}"
         )
-    return np.asarray(found.x[1:] * design.sign), float(found.x[0])
+    u = found.x[1:]
+    return np.asarray(u * design.sign), float(found.x[0] - mean @ u)
 
 
 def _log_loss(y: Array, eta: Array, cost: Array) -> float:
     return float(cost @ (np.logaddexp(0.0, eta) - y * eta) / cost.sum())
 
 
-def _out_of_fold(design: Design, kind: str, strength: float) -> tuple[Array, Array]:
-    """Fitted part of the score and the intercept, each from the folds without the signal."""
-    part, intercept = np.zeros(design.y.size), np.zeros(design.y.size)
+def _out_of_fold(design: Design, kind: str) -> list[tuple[float, Array]]:
+    """For each strength: log loss, and the fitted part of the score, shape (n,).
+
+    Each signal's part comes from the folds without its star; each strength starts from the
+    weights of the one before.
+    """
+    n = design.y.size
+    parts = np.zeros((len(STRENGTHS), n))
+    etas = np.zeros((len(STRENGTHS), n))
     for fold in np.unique(design.fold):
         out = design.fold == fold
-        weights, b = logistic(design, ~out, kind, strength)
-        part[out], intercept[out] = design.x[out] @ weights, b
-    return part, intercept
+        weights: Array | None = None
+        for row in reversed(range(len(STRENGTHS))):
+            weights, b = logistic(design, ~out, kind, STRENGTHS[row], weights)
+            parts[row, out] = design.x[out] @ weights
+            etas[row, out] = design.offset[out] + parts[row, out] + b
+    return [(_log_loss(design.y, e, design.cost), p) for e, p in zip(etas, parts, strict=True)]
 
 
 def recalibrate(part: Array, offset: Array, y: Array) -> tuple[float, float]:
@@ -163,14 +184,12 @@ def fit_weights(design: Design) -> Fit:
     NumericalError
         If an optimisation does not converge.
     """
-    trials = []
-    for kind in KINDS:
-        for strength in STRENGTHS:
-            part, intercept = _out_of_fold(design, kind, strength)
-            eta = design.offset + part + intercept
-            trials.append((_log_loss(design.y, eta, design.cost), kind, strength, part))
-    best = min(trials, key=lambda t: t[0])
-    log_loss, kind, strength, part = best
+    trials = [
+        (loss, kind, strength, part)
+        for kind in KINDS
+        for strength, (loss, part) in zip(STRENGTHS, _out_of_fold(design, kind), strict=True)
+    ]
+    log_loss, kind, strength, part = min(trials, key=lambda t: t[0])
     weights, _ = logistic(design, np.ones(design.y.size, dtype=bool), kind, strength)
     scale, intercept_ = recalibrate(part, design.offset, design.y)
     scores = design.offset + scale * part + intercept_
