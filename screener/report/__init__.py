@@ -11,12 +11,18 @@ from typing import Any
 _WHERE = {
     "build_view": "view",
     "figure_specs": "figures",
+    "load_products": "products",
+    "load_verdict": "restore",
     "print_summary": "terminal",
     "read_verdict": "verdict_json",
+    "save_products": "products",
+    "to_pandas": "tables",
+    "verdict_from_dict": "restore",
     "verdict_to_dict": "verdict_json",
     "verdict_to_json": "verdict_json",
     "write_dossier": "dossier",
     "write_figures": "figures",
+    "write_tables": "tables",
     "write_verdict": "verdict_json",
 }
 

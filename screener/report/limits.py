@@ -7,6 +7,7 @@ from typing import Any
 
 import numpy as np
 from matplotlib.figure import FigureBase
+from matplotlib.ticker import LogLocator
 
 from screener.core import Array, Screening
 from screener.report.axes import add_axes, period_axis, size
@@ -70,6 +71,7 @@ def draw_limits(fig: FigureBase, screening: Screening) -> None:
     everything = np.concatenate(heights)
     good = everything[np.isfinite(everything) & (everything > 0)]
     axes.set_ylim(good.min() / 1.8, good.max() * 1.8)
+    axes.yaxis.set_major_locator(LogLocator(subs=(1.0, 2.0, 5.0)))
     axes.yaxis.set_major_formatter(lambda value, _: f"{value:g}")
     axes.yaxis.set_minor_formatter(lambda value, _: "")
     axes.set_xlabel("period (d)")
@@ -78,6 +80,9 @@ def draw_limits(fig: FigureBase, screening: Screening) -> None:
 
 
 def _point(axes: Any, name: str, period: float, amplitude: float, colour: str, marker: str) -> None:
+    low, high = axes.get_xlim()
+    if not low <= period <= high:
+        return
     axes.plot([period], [amplitude], marker, color=LIGHT[colour], ms=6, zorder=5)
     axes.annotate(
         name, (period, amplitude), (5, 4), textcoords="offset points", color=LIGHT[colour],

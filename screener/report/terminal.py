@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import sys
 from collections.abc import Callable
+from pathlib import Path
 from typing import IO
 
 from rich.console import Console
@@ -24,10 +25,19 @@ _STYLE = {
 _Maker = Callable[..., Text]
 
 
-def print_summary(verdict: Verdict, file: IO[str] | None = None) -> None:
-    """Print a verdict as a short table to ``file`` (standard output).
+def print_summary(
+    verdict: Verdict, folder: Path | None = None, *, file: IO[str] | None = None
+) -> None:
+    """Print a verdict as a short table, and where its dossier lies.
 
     Coloured on a terminal; without colour and at 80 columns elsewhere, so that it can be piped.
+
+    Parameters
+    ----------
+    folder : Path or None
+        The folder that holds the dossier; named in the last line.
+    file : text stream
+        Standard output if absent.
     """
     stream = sys.stdout if file is None else file
     plain = not getattr(stream, "isatty", lambda: False)()
@@ -41,6 +51,9 @@ def print_summary(verdict: Verdict, file: IO[str] | None = None) -> None:
         return Text(_to_ascii(clean) if poor else clean, style=style)
 
     _print(console, verdict, text)
+    if folder is not None:
+        # never broken or padded: a path is there to be copied
+        console.print(text(f"Dossier: {folder / 'dossier.html'}"), soft_wrap=True)
 
 
 def _takes_signs(stream: IO[str]) -> bool:

@@ -28,7 +28,15 @@ from screener.core import (
 )
 from screener.report.files import write_text
 
-__all__ = ["SCHEMA", "plain", "read_verdict", "verdict_to_dict", "verdict_to_json", "write_verdict"]
+__all__ = [
+    "SCHEMA",
+    "STAR_KEYS",
+    "plain",
+    "read_verdict",
+    "verdict_to_dict",
+    "verdict_to_json",
+    "write_verdict",
+]
 
 SCHEMA = 1
 
@@ -46,6 +54,26 @@ _REQUIRED = (
     "system",
     "cautions",
 )
+# Fields of ``Star`` under their names in the file, with units.
+STAR_KEYS = {
+    "spectral_type": "spectral_type",
+    "teff": "teff_k",
+    "teff_err": "teff_err_k",
+    "mass": "mass_msun",
+    "mass_err": "mass_err_msun",
+    "radius": "radius_rsun",
+    "radius_err": "radius_err_rsun",
+    "b_minus_v": "b_minus_v",
+    "b_minus_v_err": "b_minus_v_err",
+    "vsini": "vsini_m_s",
+    "vsini_err": "vsini_err_m_s",
+    "log_rhk": "log_rhk",
+    "log_rhk_err": "log_rhk_err",
+    "rotation_period": "rotation_period_d",
+    "rotation_period_err": "rotation_period_err_d",
+    "ra_deg": "ra_deg",
+    "dec_deg": "dec_deg",
+}
 _REQUIRED_SIGNAL = ("id", "period_d", "k_m_s", "grade", "score", "findings")
 
 
@@ -140,25 +168,9 @@ def verdict_to_dict(verdict: Verdict) -> dict[str, Any]:
 
 
 def _star(verdict: Verdict) -> dict[str, Any]:
-    star = verdict.star
-    values = {
-        "spectral_type": star.spectral_type,
-        "teff_k": star.teff,
-        "teff_err_k": star.teff_err,
-        "mass_msun": star.mass,
-        "mass_err_msun": star.mass_err,
-        "radius_rsun": star.radius,
-        "radius_err_rsun": star.radius_err,
-        "b_minus_v": star.b_minus_v,
-        "b_minus_v_err": star.b_minus_v_err,
-        "vsini_m_s": star.vsini,
-        "vsini_err_m_s": star.vsini_err,
-        "log_rhk": star.log_rhk,
-        "log_rhk_err": star.log_rhk_err,
-        "rotation_period_d": star.rotation_period,
-        "rotation_period_err_d": star.rotation_period_err,
-    }
-    return {name: value for name, value in values.items() if value is not None}
+    """What was known of the star beforehand, without what was not."""
+    values = {key: getattr(verdict.star, field) for field, key in STAR_KEYS.items()}
+    return {key: value for key, value in values.items() if value is not None}
 
 
 def _notes(verdict: Verdict) -> dict[str, Any]:

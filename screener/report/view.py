@@ -6,6 +6,7 @@ markup: names come from tables of strangers and are escaped by whoever writes th
 
 from __future__ import annotations
 
+import math
 import shlex
 from dataclasses import dataclass
 
@@ -219,6 +220,8 @@ def _finding_view(finding: Finding) -> FindingView:
     for name, value in finding.parameters.items():
         if isinstance(value, bool):
             details.append(f"{name.replace('_', ' ')}: {'yes' if value else 'no'}")
+        elif isinstance(value, float) and not math.isfinite(value):
+            continue
         elif isinstance(value, int | float):
             details.append(f"{name.replace('_', ' ')}: {compact(value)}")
         elif value is not None:
@@ -272,7 +275,12 @@ def _signal_view(item: SignalVerdict) -> SignalView:
         colour=GRADE_COLOUR[item.grade],
         sentence=grade_sentence(item),
         facts=facts,
-        row=(signal.id, *(value for _, value in facts[:4]), item.grade.value),
+        row=(
+            signal.id,
+            *(value for _, value in facts[:4]),
+            f"{GRADE_SYMBOL[item.grade]} {item.grade.value}",
+            odds(item.score),
+        ),
         deciding=tuple(_finding_view(f) for f in deciding_findings(item)),
         findings=tuple(_finding_view(f) for f in speaking),
         rules=rules,
@@ -295,8 +303,8 @@ def _rotation_sentence(verdict: Verdict) -> str:
     value = f"{uncertain(rotation.period, rotation.period_err)} d"
     if not rotation.sources:
         return f"The rotation period is taken as {value}."
-    several = len(rotation.sources) > 1
-    return f"{len(rotation.sources)} source{'s give' if several else ' gives'} {value} in all."
+    count = len(rotation.sources)
+    return f"Combined from {count} source{'s' if count > 1 else ''}: {value}."
 
 
 def _model_rows(verdict: Verdict) -> tuple[tuple[str, ...], ...]:

@@ -52,7 +52,7 @@ def uncertain(value: float | None, error: float | None, digits: int = 4) -> str:
     if value is None or not math.isfinite(value):
         return MISSING
     if error is None or not math.isfinite(error) or error <= 0:
-        return number(value, digits)
+        return compact(value, digits)
     decimals = min(max(0, 1 - math.floor(math.log10(error))), 8)
     return f"{value:.{decimals}f} ± {error:.{decimals}f}".replace("-", "−")
 
@@ -100,19 +100,27 @@ def signal_name(signal: Signal) -> str:
 
 _GRADE_PHRASE = {
     Grade.PLANETARY: "behaves like a planet",
-    Grade.AMBIGUOUS: "cannot be told apart from the star's own activity with these data",
+    Grade.AMBIGUOUS: "may be a planet or the star's own activity; these data do not decide",
     Grade.LIKELY_STELLAR: "is most likely made by the star",
 }
 
 
 def grade_sentence(item: SignalVerdict) -> str:
-    """One sentence that says which signal, how large, and what it is taken for."""
+    """One sentence that says which signal, how large, and what it is taken for.
+
+    Where a veto or cap binds against the odds, a second one says which.
+    """
     signal = item.signal
-    return (
+    sentence = (
         f"The {number(signal.orbit.period, 4)} d signal of "
-        f"{number(signal.orbit.semi_amplitude, 3)} m/s {_GRADE_PHRASE[item.grade]}; "
-        f"{odds(item.score)}."
+        f"{number(signal.orbit.semi_amplitude, 3)} m/s {_GRADE_PHRASE[item.grade]} "
+        f"({odds(item.score)})."
     )
+    against = item.score > 0 and item.grade is not Grade.PLANETARY
+    binding = [e for e in item.trace if e.effect != "weight" and e.value == item.grade]
+    if against and binding:
+        sentence += f" A rule binds whatever the odds: {binding[0].sentence}"
+    return sentence
 
 
 def title_of(identifier: str) -> str:

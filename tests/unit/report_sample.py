@@ -88,7 +88,7 @@ def _products(series: TimeSeries) -> Products:
     t = series.time - ZERO
     rv = series.rv - 12.0 * series.instrument
     planet, spots = _sine(t, PLANET, 6.2, 0.0), _spots(t)
-    frequency = np.linspace(1 / 1500, 1 / 1.1, 12000)
+    frequency = np.linspace(1 / 1500, 1 / 1.1, 3000)
     traces = [
         PeriodogramTrace("velocities", frequency, _power(t, rv, frequency), 9.0),
         PeriodogramTrace("residuals", frequency, _power(t, rv - planet, frequency), 9.0),
