@@ -10,18 +10,14 @@ from collections.abc import Callable, Sequence
 from dataclasses import dataclass, replace
 from functools import partial
 
-import numpy as np
-
 from threadpoolctl import threadpool_limits
 
 from screener import __version__
 from screener.core import (
-    Array,
     Depth,
     Finding,
     Grade,
     Observations,
-    Orbit,
     Rotation,
     Screening,
     Signal,

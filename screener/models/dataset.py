@@ -39,7 +39,9 @@ class Scaled:
     derivative: tuple[bool, ...]
     cycle_columns: int
     jitter_names: tuple[tuple[str, str], ...]
-    slow: Array  # (n_series, n_obs), the indicators' slow parts in their own units; 0 for velocities
+    slow: (
+        Array  # (n_series, n_obs), the indicators' slow parts in their own units; 0 for velocities
+    )
 
 
 def robust_sd(values: Array) -> float:

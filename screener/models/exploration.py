@@ -53,10 +53,10 @@ class Search:
 
 def same_period(first: float, second: float, baseline: float) -> bool:
     """Whether two periods cannot be told apart over the baseline."""
-    return abs(1 / first - 1 / second) < 1 / baseline
+    return abs(1 / first - 1 / second) < 1.3 / baseline
 
 
-def usable(frequency: Array, baseline: float) -> Array:
+def usable(frequency: Array, baseline: float) -> np.ndarray[tuple[int, ...], np.dtype[np.bool_]]:
     """Where a search may look: not within the resolution of one or two cycles per day.
 
     Nightly sampling turns slow drifts into periods of a day; nothing there can be told from them.
@@ -154,6 +154,7 @@ def _search(
             n_free = series.n_obs - result.model.data.columns.shape[2] - 2 * len(terms)
             gain = gain_with_free_scale(gain, float(max(n_free, 2)), max(n_free, 2))
         gains.append(gain)
+        gain = np.where(_apart(grid, terms, series.baseline), gain, 0.0)
         if len(found) >= MOST_SIGNALS or series.n_obs < 10 + 5 * len(terms):
             break
         tops = peaks(grid, gain, 3, series.baseline)
@@ -177,6 +178,19 @@ def _search(
         ]
         fits.append(result)
     return Search(tuple(found), result, tuple(fits), grid, tuple(gains), bandwidth, span)
+
+
+def _apart(
+    grid: Array, terms: Sequence[OrbitTerm], baseline: float
+) -> np.ndarray[tuple[int, ...], np.dtype[np.bool_]]:
+    """Frequencies that can be told from the orbits in the model.
+
+    Two sinusoids closer than this imitate a beat with large and opposite amplitudes.
+    """
+    keep = np.ones(grid.size, dtype=bool)
+    for term in terms:
+        keep &= np.abs(grid - 1 / term.period) > 1.3 / baseline
+    return keep
 
 
 def _hinted(

@@ -86,7 +86,6 @@ def _prior_terms(model: JointModel, prior: HyperPrior) -> tuple[Array, Array, Ar
         for part in ("a", "b"):
             sd[slices[part]] = 2.0
             lower[slices[part]], upper[slices[part]] = -20.0, 20.0
-        lower[slices["a"].start] = 0.0  # the process' sign is free
     jitter = slices["jitter"]
     data = model.data
     for j in range(data.n_jitter):
@@ -108,15 +107,21 @@ def _prior_terms(model: JointModel, prior: HyperPrior) -> tuple[Array, Array, Ar
     return mean, sd, lower, upper
 
 
-def starting_point(model: JointModel, prior: HyperPrior, signs: Sequence[float] = ()) -> Array:
-    """Prior means for the kernel, moderate amplitudes, jitter at half the errors."""
+def starting_point(
+    model: JointModel, prior: HyperPrior, signs: Sequence[float] = (), slope: float = 0.3
+) -> Array:
+    """Prior means for the kernel, moderate amplitudes, jitter at half the errors.
+
+    ``slope`` is the amplitude on the derivative: whether velocities lead or follow the process
+    makes two optima with a barrier between them.
+    """
     mean, _, lower, upper = _prior_terms(model, prior)
     out = mean.copy()
     if model.kernel is not None:
         out[model.slices["a"]] = 0.6
         if len(signs):
             out[model.slices["a"]] *= np.asarray(signs)
-        out[model.slices["b"]] = 0.2
+        out[model.slices["b"]] = slope
     return np.clip(out, lower, upper)
 
 

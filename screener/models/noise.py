@@ -58,7 +58,8 @@ class NoiseModel:
         starts = [self.transfer(model, other) for other in near]
         if fresh or not starts:
             signs = self._signs()
-            starts.append(starting_point(model, self.prior, signs))
+            slopes = (0.3, -0.3) if model.rank == 2 else (0.3,)
+            starts += [starting_point(model, self.prior, signs, b) for b in slopes]
         result = fit(model, self.prior, starts, self.max_iterations)
         self.n_evaluations += result.n_evaluations
         if known is None or result.objective > known.objective:
