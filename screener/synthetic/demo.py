@@ -32,7 +32,7 @@ TALES: tuple[tuple[str, str, int, Recipe], ...] = (
         12,
         Recipe(
             "sunlike",
-            fixed_planets=(_planet(8.713, 6.4, 0.08, 1.1, 0.35),),
+            fixed_planets=(_planet(6.137, 6.4, 0.08, 1.1, 0.35),),
             body_teff=5620.0,
             rotation=26.5,
             inclination=1.2,
@@ -45,7 +45,7 @@ TALES: tuple[tuple[str, str, int, Recipe], ...] = (
     (
         "Heron 31",
         "a spotted impostor: its rotation, no planet",
-        31,
+        105,
         Recipe(
             "fast spotted",
             fixed_planets=(),
@@ -61,7 +61,7 @@ TALES: tuple[tuple[str, str, int, Recipe], ...] = (
     (
         "Heron 47",
         "a truly ambiguous case: a weak planet on top of the half rotation period",
-        47,
+        169,
         Recipe(
             "active dwarf",
             fixed_planets=(_planet(9.62, 3.1, 0.0, 0.0, 0.6),),
