@@ -61,7 +61,7 @@ TALES: tuple[tuple[str, str, int, Recipe], ...] = (
     (
         "Heron 47",
         "a truly ambiguous case: a weak planet on top of the half rotation period",
-        169,
+        87,
         Recipe(
             "active dwarf",
             fixed_planets=(_planet(9.62, 3.1, 0.0, 0.0, 0.6),),
