@@ -25,8 +25,8 @@ from scipy.linalg import lapack
 
 from screener.core import Array, IntArray, NumericalError
 from screener.core.memory import keep_freed_memory
-from screener.models.kernels import Kernel, Lags
 from screener.models.kepler import solve_kepler
+from screener.models.kernels import Kernel, Lags
 
 __all__ = ["JointData", "JointModel", "OrbitTerm", "Solution"]
 
