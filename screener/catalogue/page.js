@@ -19,6 +19,10 @@
     }),
   }));
   const periodColumn = heads.findIndex(head => head.dataset.k === "period");
+  const more = by("more");
+  const STEP = 200;
+  let shown = [];      // what passes the filter, in order
+  let attached = 0;    // how many of these are in the table: laying out thousands of rows is slow
   const words = new Intl.Collator(undefined, {numeric: true});
 
   function sortBy(column, direction) {
@@ -30,9 +34,7 @@
       if (y === null || y === "") return -1;
       return sign * (typeof x === "number" ? x - y : words.compare(x, y));
     });
-    const all = document.createDocumentFragment();
-    for (const fact of facts) all.append(fact.row);
-    body.append(all);
+    show();
     heads.forEach((head, i) => {
       if (head.hasAttribute("aria-sort")) head.setAttribute("aria-sort", i === column ? direction : "none");
     });
@@ -42,17 +44,34 @@
     const text = by("f-text").value.trim().toLowerCase();
     const grade = by("f-grade").value;
     const low = parseFloat(by("f-low").value), high = parseFloat(by("f-high").value);
-    let shown = 0;
     for (const fact of facts) {
       const period = fact.values[periodColumn];
-      const keep = (!text || fact.text.includes(text)) && (!grade || fact.grade === grade)
+      fact.keep = (!text || fact.text.includes(text)) && (!grade || fact.grade === grade)
         && (isNaN(low) || (period !== null && period >= low))
         && (isNaN(high) || (period !== null && period <= high));
-      fact.row.hidden = !keep;
-      if (keep) shown++;
     }
-    status.textContent = shown + " of " + facts.length + " rows";
+    show();
   }
+
+  function show() {
+    shown = facts.filter(fact => fact.keep);
+    attached = 0;
+    body.replaceChildren();
+    extend(STEP);
+    status.textContent = shown.length + " of " + facts.length + " rows";
+  }
+
+  function extend(count) {
+    const next = shown.slice(attached, attached + count);
+    body.append(...next.map(fact => fact.row));
+    attached += next.length;
+    more.hidden = attached >= shown.length;
+  }
+  more.addEventListener("click", () => extend(STEP));
+  if ("IntersectionObserver" in window)
+    new IntersectionObserver(seen => { if (seen[0].isIntersecting) extend(STEP); },
+      {rootMargin: "600px"}).observe(more);
+  window.addEventListener("beforeprint", () => extend(Infinity));
 
   heads.forEach((head, column) => {
     const button = head.querySelector("button");
@@ -90,8 +109,8 @@
     if (event.key !== "ArrowDown" && event.key !== "ArrowUp") return;
     if (typing && event.target.id !== "f-text") return;
     const step = event.key === "ArrowDown" ? "nextElementSibling" : "previousElementSibling";
-    let next = row ? row[step] : (event.target.id === "f-text" && event.key === "ArrowDown" ? body.rows[0] : null);
-    while (next && next.hidden) next = next[step];
+    if (row && event.key === "ArrowDown" && !row.nextElementSibling) extend(STEP);
+    const next = row ? row[step] : (event.target.id === "f-text" && event.key === "ArrowDown" ? body.rows[0] : null);
     if (!next) return;
     event.preventDefault();
     next.focus();
