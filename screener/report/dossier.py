@@ -15,7 +15,7 @@ from screener.report.files import write_bytes, write_text
 from screener.report.style import DARK, LIGHT, css_variables
 from screener.report.view import DossierView, build_view
 
-__all__ = ["DOSSIER_FORMATS", "dossier_html", "dossier_markdown", "write_dossier"]
+__all__ = ["DOSSIER_FORMATS", "dossier_html", "dossier_markdown", "result_html", "write_dossier"]
 
 DOSSIER_FORMATS = ("html", "md", "pdf")
 
@@ -48,6 +48,11 @@ def dossier_html(view: DossierView, figures: Iterable[tuple[FigureSpec, bytes]])
     drawn = [(spec, Markup(inline_svg(spec, svg))) for spec, svg in figures]
     template = _environment(True).get_template("dossier.html")
     return template.render(view=view, figures=drawn, style=_style())
+
+
+def result_html(view: DossierView) -> str:
+    """A short piece of a page with the grades and what decided them, for notebooks."""
+    return _environment(True).get_template("result.html").render(view=view)
 
 
 def dossier_markdown(view: DossierView, figures: Iterable[FigureSpec]) -> str:
