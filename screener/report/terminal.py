@@ -124,7 +124,7 @@ def _short_odds(score: float) -> str:
 
 def _why(item: SignalVerdict) -> str:
     deciding = deciding_findings(item, 1)
-    reason = deciding[0].sentence if deciding else "No test had anything to say."
+    reason = deciding[0].sentence.replace("+-", "±") if deciding else "No test had anything to say."
     return f"{reason} Next: {item.next_step}" if item.next_step else reason
 
 

@@ -231,7 +231,7 @@ def _finding_view(finding: Finding) -> FindingView:
         outcome=finding.outcome.value,
         symbol=OUTCOME_SYMBOL[finding.outcome],
         colour=OUTCOME_COLOUR[finding.outcome],
-        sentence=finding.sentence,
+        sentence=finding.sentence.replace("+-", "±"),
         statistic=compact(finding.statistic),
         p_value=chance(finding.p_value),
         power=MISSING if finding.power is None else f"{100 * finding.power:.0f}\u00a0%",

@@ -116,9 +116,10 @@ def grade_sentence(item: SignalVerdict) -> str:
         f"{number(signal.orbit.semi_amplitude, 3)} m/s {_GRADE_PHRASE[item.grade]} "
         f"({odds(item.score)})."
     )
-    against = item.score > 0 and item.grade is not Grade.PLANETARY
-    binding = [e for e in item.trace if e.effect != "weight" and e.value == item.grade]
-    if against and binding:
+    # a cap or veto holds down what the odds would lift, a floor holds up what they would sink
+    kinds = ("cap", "veto") if item.score > 0 else ("floor",)
+    binding = [e for e in item.trace if e.effect in kinds and e.value == item.grade]
+    if binding and item.grade is not Grade.PLANETARY:
         sentence += f" A rule binds whatever the odds: {binding[0].sentence}"
     return sentence
 
@@ -134,7 +135,12 @@ def effect_text(effect: RuleEffect) -> str:
     if effect.effect == "weight" and isinstance(effect.value, int | float):
         return f"{effect.value:+.2f}".replace("-", "−")
     value = effect.value if isinstance(effect.value, str) else number(effect.value)
-    return f"at most {value}" if effect.effect == "cap" else f"{effect.effect}: {value}"
+    bounds = {"cap": "at most", "floor": "at least"}
+    return (
+        f"{bounds[effect.effect]} {value}"
+        if effect.effect in bounds
+        else f"{effect.effect}: {value}"
+    )
 
 
 def deciding_findings(item: SignalVerdict, count: int = 3) -> tuple[Finding, ...]:

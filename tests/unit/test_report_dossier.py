@@ -21,6 +21,7 @@ from screener.report.words import (
     chance,
     compact,
     deciding_findings,
+    effect_text,
     grade_sentence,
     number,
     odds,
@@ -277,6 +278,11 @@ def test_a_binding_rule_is_named_in_the_sentence():
     capped = replace(planet, grade=Grade.AMBIGUOUS, trace=(*planet.trace, cap))
     assert grade_sentence(capped).endswith("A rule binds whatever the odds: Too few nights.")
     assert "rule" not in grade_sentence(planet)
+    floor = replace(cap, rule="silent", sentence="Nothing speaks for the star.", effect="floor")
+    held = replace(capped, score=-3.0, trace=(*planet.trace, cap, floor))
+    assert grade_sentence(held).endswith("whatever the odds: Nothing speaks for the star.")
+    assert effect_text(floor) == "at least ambiguous"
+    assert effect_text(cap) == "at most ambiguous"
 
 
 @pytest.mark.parametrize(
