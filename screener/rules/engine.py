@@ -7,13 +7,13 @@ from dataclasses import dataclass
 
 from screener.core import Finding, Grade, RuleEffect, Signal
 from screener.rules.explain import next_step, would_change
+from screener.rules.grammar import Field
 from screener.rules.scope import Scope, holds
 from screener.rules.types import Graded, Rule, RuleSet, Thresholds
 
 __all__ = ["Fired", "combine", "grade"]
 
 PRIOR = "prior"
-_RANK = {Grade.LIKELY_STELLAR: 0, Grade.AMBIGUOUS: 1, Grade.PLANETARY: 2}
 
 
 @dataclass(frozen=True)
@@ -113,8 +113,8 @@ def _effect(item: Fired, scope: Scope, without: Grade) -> RuleEffect:
     return RuleEffect(rule.id, rule.sentence, rule.effect, value, seen, without)
 
 
-def _show(scope: Scope, field: object) -> str:
-    value = scope.value(field)  # type: ignore[arg-type]
+def _show(scope: Scope, field: Field) -> str:
+    value = scope.value(field)
     return f"{value:.4g}" if isinstance(value, float) else str(value)
 
 
@@ -141,7 +141,9 @@ def _deciding(
         return tuple(binding)
     sign = {Grade.PLANETARY: 1.0, Grade.LIKELY_STELLAR: -1.0, Grade.AMBIGUOUS: 0.0}[result]
     weights = [e for e in rules if isinstance(e.value, float) and e.value * sign >= 0.0]
-    return tuple(e.rule for e in sorted(weights, key=weight, reverse=True)[:3])
+    heaviest = tuple(e.rule for e in sorted(weights, key=weight, reverse=True)[:3])
+    # nothing spoke: the odds before any evidence stand
+    return heaviest or (PRIOR,)
 
 
 def _binds(effect: str, score: float, thresholds: Thresholds) -> bool:

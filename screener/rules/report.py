@@ -67,7 +67,7 @@ def markdown(result: Calibration, before: RuleSet, seed: int) -> str:
     )
     lines += ["", "## Weights", ""]
     lines += _table(["rule", "weight", "signals on which it counts"], _weight_rows(result))
-    lines += ["", "## Single features, all stars", ""]
+    lines += ["", "## Single features, stars of the fit", ""]
     lines += _table(
         ["quantity", "AUC", "signals that have it"],
         [[name, _number(a), str(n)] for name, a, n in single_features(result.trained, rules)],

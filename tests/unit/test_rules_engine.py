@@ -226,6 +226,15 @@ def test_prior_classes_move_by_their_occurrence(tmp_path: Path) -> None:
     assert any(e.rule == "hot-jupiter" for e in grade([], rules, hot).trace)
 
 
+def test_where_nothing_speaks_the_prior_decides(toy: RuleSet) -> None:
+    low = dataclasses.replace(toy, log_odds=-9.0)
+    result = grade([_finding("b", p_value=0.04, statistic=0.0)], low)
+    assert result.grade is Grade.LIKELY_STELLAR
+    assert result.deciding_rules == ("down",)
+    bare = dataclasses.replace(low, rules=tuple(r for r in low.rules if r.effect == "cap"))
+    assert grade([], bare).deciding_rules == ("prior",)
+
+
 def test_rule_sets_travel_between_processes(toy: RuleSet) -> None:
     again = pickle.loads(pickle.dumps(toy))
     assert again == toy
