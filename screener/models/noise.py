@@ -18,6 +18,7 @@ from screener.search.periodogram import Precision
 __all__ = ["NoiseModel", "indicators_only", "joint_process", "velocities_only", "white_noise"]
 
 _AMPLITUDE_SD = 3.0  # prior of K cos omega and K sin omega, in units of the velocities' scatter
+_DERIVATIVE_UP_TO = 400  # velocities
 
 
 @dataclass(eq=False)
@@ -215,11 +216,13 @@ def joint_process(
 ) -> NoiseModel:
     """Correlated activity: under all series with its derivative, or under the velocities alone."""
     if joint:
+        # the derivative doubles the matrix; long series of quiet stars do without it
+        with_derivative = scaled.data.n_obs <= _DERIVATIVE_UP_TO
         return NoiseModel(
             "joint process",
             scaled.data,
             KERNELS[kernel],
-            scaled.derivative,
+            scaled.derivative if with_derivative else (False,) * len(scaled.derivative),
             prior,
             float(scaled.scale[0]),
         )

@@ -24,6 +24,7 @@ __all__ = ["DrawnSignal", "NullDraws", "draw_series", "injections", "n_draws", "
 _DRAWS = {Depth.QUICK: 0, Depth.STANDARD: 50, Depth.DEEP: 400}
 _INJECTIONS = {Depth.QUICK: 0, Depth.STANDARD: 10, Depth.DEEP: 60}
 _BATCH = 10
+_FEWEST_DRAWS = 10  # fewer say nothing
 _FULL_DRAWS_UP_TO = 170  # velocities; the cost of a draw grows with the third power
 
 
@@ -54,7 +55,8 @@ def n_draws(depth: Depth, n_obs: int) -> int:
     Depends on the input alone, never on the clock, so that the same input gives the same verdict.
     """
     share = min(1.0, (_FULL_DRAWS_UP_TO / n_obs) ** 3)
-    return math.ceil(_DRAWS[depth] * share) if _DRAWS[depth] else 0
+    number = math.ceil(_DRAWS[depth] * share)
+    return number if number >= _FEWEST_DRAWS else 0
 
 
 def draw_series(
@@ -141,7 +143,8 @@ def injections(
 
     None where no search found it.
     """
-    total = math.ceil(_INJECTIONS[depth] * n_draws(depth, series.n_obs) / _DRAWS[depth])
+    share = n_draws(depth, series.n_obs) / max(_DRAWS[depth], 1)
+    total = math.ceil(_INJECTIONS[depth] * share)
     children = np.random.SeedSequence([seed, 14]).spawn(total)
     periods, drawn = [], []
     for child in children:
