@@ -6,8 +6,10 @@ their fitted noise, so that slow drifts common to both by chance do not count as
 
 Statistic: the largest drop of Pearson's |r| over the indicators when the signal is taken out of
 the velocities: where the signal itself follows the indicator, r falls with it. The p-value is the
-share of surrogates with a drop at least as large. The p-value of the correlation as such (the
-largest of Pearson, Spearman and Kendall over the indicators) is the parameter ``correlation_p``.
+share of surrogates with a drop at least as large, the power the share of surrogates with the line
+that ``indicator_power`` expects whose drop would count at p = 0.01. The p-value of the
+correlation as such (the largest of Pearson, Spearman and Kendall over the indicators) is the
+parameter ``correlation_p``.
 """
 
 from __future__ import annotations
@@ -118,36 +120,20 @@ def _coherence(case: Case, channels: Channels, k: int) -> float | None:
     return float(abs(cross) ** 2 / max(size_a * size_b, 1e-300))
 
 
-def _power(case: Case, channels: Channels, sd: Array, critical: float) -> float:
-    """Chance of a drop beyond ``critical`` if the star made the signal.
+def _spoken(case: Case, channels: Channels, fakes: Array, rng: np.random.Generator) -> Array:
+    """Surrogates with the line that the star would put into them, shape as ``fakes``.
 
-    The indicator then has its expected amplitude at the signal's period (scatter as in
-    ``indicator_power``) in any phase: with amplitudes K and A and total scatters s_v and s_i the
-    signal's part of r is K A cos(phase) / (2 s_v s_i).
+    Amplitudes and their scatter are those of ``indicator_power``, phases are random.
     """
-    size = expected(case, channels)
-    velocity = max(float(np.std(case.target_rv)), 1e-12)
-    spread = np.nanstd(_filled_rest(channels), axis=0)
-    amplitude = case.signal.orbit.semi_amplitude
-    cosine = np.abs(np.cos(np.pi * (np.arange(12) + 0.5) / 12.0))
-    miss = np.ones(NODES.size)
-    for k in range(len(channels.names)):
-        part = size[k] * np.exp(SPREAD * NODES)[:, None] * cosine[None, :]
-        # the line adds to the indicator's scatter
-        full = np.hypot(spread[k], size[k] * np.exp(SPREAD * NODES) / math.sqrt(2.0))
-        r = amplitude * part / (2.0 * velocity * np.maximum(full, 1e-300)[:, None])
-        chance = np.mean(stats.norm.sf((critical - r) / max(sd[k], 1e-6)), axis=1)
-        miss *= 1.0 - (1.0 - MUTE) * chance
-    return float(WEIGHTS @ (1.0 - miss))
-
-
-def _filled_rest(channels: Channels) -> Array:
-    """Indicator values less zero points and slope, NaN where not measured."""
-    rest: Array = np.full(channels.values.shape, np.nan)
-    for k in range(len(channels.names)):
-        rows = channels.noise.measured[:, k]
-        rest[rows, k] = _less_nuisance(channels.values[rows, k], channels.noise.nuisance[rows])
-    return rest
+    n = fakes.shape[2]
+    columns = signal_columns(case)
+    factor = np.exp(SPREAD * rng.choice(NODES, size=n, p=WEIGHTS))
+    result = fakes.copy()
+    for k, size in enumerate(expected(case, channels)):
+        phase = rng.uniform(0.0, 2.0 * np.pi, n)
+        loud = size * factor * (rng.random(n) >= MUTE)
+        result[:, k] += columns @ (loud * np.stack([np.cos(phase), np.sin(phase)]))
+    return result
 
 
 def run(case: Case) -> Finding:
@@ -160,22 +146,25 @@ def run(case: Case) -> Finding:
     noise, rng, n = channels.noise, case.rng(ID), n_draws(case)
     whitened = fit_columns(channels, np.zeros((case.series.n_obs, 0)))
     fakes = draw(noise, rng, n, residual_correlation(whitened))
+    spoken = _spoken(case, channels, fakes, rng)
     n_series = len(channels.names)
     seen, after, raw = np.empty((n_series, 3)), np.empty(n_series), np.empty(n_series)
-    trials, drops = np.empty((n_series, 3, n)), np.empty((n_series, n))
+    trials, drops = np.empty((n_series, 3, n)), np.empty((n_series, 2, n))
     for k in range(n_series):
         rows = noise.measured[:, k]
         basis = noise.nuisance[rows]
         with_all = _less_nuisance(case.series.rv[rows], basis)
         x = _less_nuisance(case.target_rv[rows], basis)
         rest = _less_nuisance(case.residual_rv[rows], basis)
-        y = _less_nuisance(np.column_stack([channels.values[rows, k], fakes[rows, k]]), basis)
+        y = np.column_stack([channels.values[rows, k], fakes[rows, k], spoken[rows, k]])
+        y = _less_nuisance(y, basis)
         thin = max(1, math.ceil(x.size / _KENDALL_ROWS))
-        both = _coefficients(x, y, thin)
+        both = _coefficients(x, y[:, : n + 1], thin)
         without = pearson(rest, y)
+        drop = np.abs(pearson(x, y)) - np.abs(without)
         seen[k], trials[k] = both[:, 0], both[:, 1:]
         after[k], raw[k] = without[0], pearson(with_all, y[:, :1])[0]
-        drops[k] = np.abs(both[0, 1:]) - np.abs(without[1:])
+        drops[k] = drop[1:].reshape(2, n)
     sd = np.sqrt(np.mean(trials**2, axis=2))
     deviation = float(np.max(np.abs(seen) / sd))
     largest = np.max(np.abs(trials) / sd[..., None], axis=(0, 1))
@@ -184,10 +173,12 @@ def run(case: Case) -> Finding:
     drop = np.abs(seen[:, 0]) - np.abs(after)
     best = int(np.argmax(drop))
     statistic = float(drop[best])
-    false_drops = np.max(drops, axis=0)
+    false_drops, true_drops = np.max(drops, axis=0)
     p_value = float((1 + np.count_nonzero(false_drops >= statistic)) / (1 + n))
-    critical = float(np.quantile(false_drops, 1.0 - ALPHA))
-    power = _power(case, channels, np.std(drops, axis=1), critical)
+    # p <= ALPHA leaves room for so many false drops above
+    allowed = max(int(ALPHA * (n + 1)) - 1, 0)
+    critical = float(np.sort(false_drops)[-1 - allowed])
+    power = float(np.mean(true_drops > critical))
     lag, lag_err = _phase_lag(case, channels, best)
     parameters: dict[str, float | int | str | None] = {
         "best": channels.names[best],

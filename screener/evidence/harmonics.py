@@ -1,9 +1,10 @@
 """Is the period a harmonic of another signal, or does eccentricity do another signal's work?
 
-Null: the signal's period has nothing to do with those of the others. Statistic: distance to the
-nearest small-integer ratio p:q (p, q up to 3, not 1:1) with a stronger signal, in frequency
-resolutions 1/baseline, lowered by none. The p-value is the share of periods (even in frequency,
-over a factor of four around the signal's) that would lie at least as near to such a ratio.
+Null: the signal's period has nothing to do with those of the others: its frequency lies anywhere
+between a quarter and four times theirs. Statistic: distance to the nearest small-integer ratio
+p:q (p, q up to 3, not 1:1) with a stronger signal, in frequency resolutions 1/baseline. The
+p-value is the share of that range at least as near to such a ratio. The power is the chance that
+a true harmonic lies within half a resolution of it, given the error of the period.
 """
 
 from __future__ import annotations
@@ -62,7 +63,8 @@ def run(case: Case) -> Finding:
     related = ""
     if stronger and baseline > 0.0:
         own = 1.0 / orbit.period
-        trial = np.linspace(0.5 * own, 2.0 * own, 2001)
+        theirs = [1.0 / s.orbit.period for s in stronger]
+        trial = np.linspace(0.25 * min(theirs), 4.0 * max(theirs), 4001)
         measured = [_distance(np.append(trial, own), s, baseline) for s in stronger]
         nearest = np.min([d for d, _ in measured], axis=0)
         statistic = float(nearest[-1])

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 from scipy import stats
@@ -19,6 +19,7 @@ __all__ = [
     "combined_p",
     "fit_columns",
     "n_draws",
+    "noise_beside_signal",
     "residual_correlation",
     "signal_columns",
     "velocity_channel",
@@ -92,15 +93,26 @@ def channels_of(case: Case, names: tuple[str, ...] | None = None) -> Channels | 
     if not kept:
         return None
     stacked = np.column_stack(values)
-    nuisance = zero_points(case.series.time, case.series.instrument)
-    noise = fit_noise(case.series.time, stacked, np.column_stack(errors), nuisance)
+    noise = noise_beside_signal(case, stacked, np.column_stack(errors))
     return Channels(tuple(kept), stacked, noise)
 
 
-def velocity_channel(case: Case, rv: Array, slope: bool = True) -> Channels:
+def noise_beside_signal(case: Case, values: Array, errors: Array) -> Noise:
+    """Noise of series of shape (n_obs, K), a sinusoid at the signal's period left aside.
+
+    Fitted without it, the noise would take in a true line (and hide it), or, on residuals, lack
+    what the signal took from it. Zero points and slope are the nuisance terms of the result.
+    """
+    series = case.series
+    nuisance = zero_points(series.time, series.instrument)
+    full = np.column_stack([nuisance, signal_columns(case)])
+    noise = fit_noise(series.time, values, errors, full)
+    return replace(noise, nuisance=nuisance, dof=noise.dof + 2.0)
+
+
+def velocity_channel(case: Case, rv: Array) -> Channels:
     """Velocities (m/s, shape (n_obs,)) as a channel; zero points and slope stay free."""
-    nuisance = zero_points(case.series.time, case.series.instrument, slope)
-    noise = fit_noise(case.series.time, rv[:, None], case.rv_sd[:, None], nuisance)
+    noise = noise_beside_signal(case, rv[:, None], case.rv_sd[:, None])
     return Channels(("rv",), rv[:, None], noise)
 
 

@@ -93,7 +93,7 @@ def run(case: Case) -> Finding:
             references=REFERENCES,
         )
     orbit = case.signal.orbit
-    longest = max(2.0 * case.series.baseline, 2.0 * orbit.period, 100.0)
+    longest = max(2.0 * case.series.baseline, 1.05 * orbit.period)
     grid: Array = np.geomspace(min(0.8, 0.9 * orbit.period), longest, _N_GRID)
     span = math.log(grid[-1] / grid[0])
     width = min((orbit.period_err or 0.0) / orbit.period, 0.2)
