@@ -11,15 +11,33 @@ from typing import TYPE_CHECKING, Any
 
 if TYPE_CHECKING:
     from screener.catalogue.folder import DiskFull
-    from screener.catalogue.messages import Limits
-    from screener.catalogue.run import Options, Stopped, Summary, run_catalogue
+    from screener.catalogue.messages import ClusterLost, Limits
+    from screener.catalogue.run import run_catalogue
+    from screener.catalogue.settings import Options, Summary
+    from screener.catalogue.stopping import Stopped
 
-__all__ = ["DiskFull", "Limits", "Options", "Stopped", "Summary", "run_catalogue"]
+__all__ = [
+    "ClusterLost",
+    "DiskFull",
+    "Limits",
+    "Options",
+    "Stopped",
+    "Summary",
+    "run_catalogue",
+]
 
-_WHERE = {"DiskFull": "folder", "Limits": "messages"}
+_WHERE = {
+    "ClusterLost": "messages",
+    "DiskFull": "folder",
+    "Limits": "messages",
+    "Options": "settings",
+    "Stopped": "stopping",
+    "Summary": "settings",
+    "run_catalogue": "run",
+}
 
 
 def __getattr__(name: str) -> Any:
-    if name not in __all__:
+    if name not in _WHERE:
         raise AttributeError(f"module {__name__!r} has no attribute {name!r}")
-    return getattr(importlib.import_module(f"{__name__}.{_WHERE.get(name, 'run')}"), name)
+    return getattr(importlib.import_module(f"{__name__}.{_WHERE[name]}"), name)

@@ -16,19 +16,15 @@ import time
 import uuid
 from typing import Any
 
-from screener.catalogue.messages import Event, Failed, Limits
+from screener.catalogue.messages import ClusterLost, Event, Failed, Limits
 from screener.catalogue.pool import LocalPool
-from screener.core import InputFault, ScreenerError
+from screener.core import InputFault
 
-__all__ = ["ClusterLost", "ClusterPool", "run_in_process"]
+__all__ = ["ClusterPool", "run_in_process"]
 
 _CONNECT = 30.0  # s
 _local = threading.local()
 _pools: list[LocalPool] = []
-
-
-class ClusterLost(ScreenerError):
-    """The scheduler does not answer any more."""
 
 
 def run_in_process(work: str, task: str, payload: Any, limits: Limits) -> Event:

@@ -6,7 +6,13 @@ from dataclasses import dataclass, field
 from pathlib import Path
 from typing import Any, Protocol
 
-__all__ = ["Done", "Event", "Executor", "Failed", "Limits", "StarTask", "WorkResult"]
+from screener.core import ScreenerError
+
+__all__ = ["ClusterLost", "Done", "Event", "Executor", "Failed", "Limits", "StarTask", "WorkResult"]
+
+
+class ClusterLost(ScreenerError):
+    """The cluster's scheduler does not answer any more; what is done is kept."""
 
 
 @dataclass(frozen=True)

@@ -93,7 +93,7 @@ def _row(
         "period": _number(row["period_d"], 5),
         "amplitude": _number(row["k_m_s"], 3),
         "amplitude_err": _number(row["k_err_m_s"], 2),
-        "score": _number(row["score"], 3),
+        "score": "" if row["score"] is None else f"{row['score']:+.1f}".replace("-", "−"),
         "rotation": _number(row["rotation_period_d"], 3),
         "rules": row["deciding_rules"] or "",
         "seconds": _number(row["seconds"], 3),

@@ -181,12 +181,15 @@ class LiveWatch:
     def _panel(self, tally: Tally) -> Any:
         from rich.console import Group
         from rich.progress_bar import ProgressBar
+        from rich.table import Table
         from rich.text import Text
 
+        head = Table.grid(padding=(0, 1))
+        bar = ProgressBar(total=max(1, tally.total), completed=tally.position(), width=30)
+        head.add_row(bar, Text(tally.words()))
         names = ", ".join(printable(name) for name in tally.running[:8])
         return Group(
-            ProgressBar(total=max(1, tally.total), completed=tally.position()),
-            Text(tally.words()),
+            head,
             Text(tally.grade_words()),
             Text(f"at work on: {names or 'nothing yet'}", overflow="ellipsis", no_wrap=True),
         )

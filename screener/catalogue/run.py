@@ -10,118 +10,27 @@ from __future__ import annotations
 
 import heapq
 import json
-import os
-import signal
 import time
-from collections.abc import Callable, Iterator
-from contextlib import contextmanager
-from dataclasses import dataclass, field
+from collections.abc import Callable
 from pathlib import Path
-from types import FrameType
 from typing import Any
 
 from screener import __version__
 from screener.catalogue.folder import RunFolder, full_disk_told
-from screener.catalogue.keys import content_of, estimate_seconds, work_key
-from screener.catalogue.messages import Done, Event, Executor, Failed, Limits, StarTask
+from screener.catalogue.messages import ClusterLost, Done, Event, Executor, Failed, StarTask
+from screener.catalogue.planning import Item, make_plan
 from screener.catalogue.pool import LocalPool
 from screener.catalogue.progress import LogFile, Tally, Watch, clock
+from screener.catalogue.settings import Options, Summary
 from screener.catalogue.sources import StarInput, find_stars
-from screener.catalogue.work import DRAW, SCREEN
-from screener.core import InputFault, ScreenerError
-from screener.rules import load_rules
-from screener.store import RunSettings, StarRow, Store, WorkRow, grade_of
-from screener.store.database import Planned
+from screener.catalogue.stopping import StopFlag, Stopped
+from screener.store import Store, grade_of
 from screener.store.reading import counts, failures, ranked, work_summary
 
-__all__ = ["Options", "Stopped", "Summary", "run_catalogue"]
+__all__ = ["run_catalogue"]
 
 ATTEMPTS = 2
 _PAGE_EVERY = 120.0  # s between refreshes of the page while the run goes on
-
-
-class Stopped(ScreenerError):
-    """The run was asked to stop; what is done is kept."""
-
-
-@dataclass(frozen=True)
-class Options:
-    """How to run.
-
-    Attributes
-    ----------
-    workers : int
-        Processes on this machine.
-    limits : Limits
-        Per star.
-    scheduler : str or None
-        Address of a Dask scheduler that takes the stars instead.
-    dossiers : int
-        How many of the most planet-like stars get a dossier at the end.
-    compare : Path or None
-        Folder of an earlier run, for the page.
-    retry_failed : bool
-        Try stars again that an earlier session gave up.
-    work, draw : str
-        "module:name" of the functions that workers apply.
-    """
-
-    workers: int = field(default_factory=lambda: os.cpu_count() or 1)
-    limits: Limits = field(default_factory=lambda: Limits(900.0, 2000.0))
-    depth: str = "standard"
-    seed: int = 1
-    scheduler: str | None = None
-    dossiers: int = 20
-    compare: Path | None = None
-    retry_failed: bool = False
-    work: str = SCREEN
-    draw: str = DRAW
-
-
-@dataclass(frozen=True)
-class Summary:
-    """What came of a run: stars by grade (and "failed"), and what this session did."""
-
-    folder: Path
-    counts: dict[str, int]
-    computed: int
-    kept: int
-    seconds: float
-    peak_memory_mb: float | None
-    failures: list[dict[str, Any]]
-    start_seconds: float | None = None  # median time until a worker was ready
-
-
-@dataclass(eq=False)
-class _Item:
-    star: StarInput
-    estimate: float
-    attempts: int
-    table_sha256: str | None
-
-
-class _StopFlag:
-    """Set by the signals with which people, terminals and batch systems end a program."""
-
-    def __init__(self) -> None:
-        self.signal: int | None = None
-
-    @contextmanager
-    def listening(self) -> Iterator[None]:
-        def note(number: int, frame: FrameType | None) -> None:
-            self.signal = number
-
-        signals = (signal.SIGINT, signal.SIGTERM, signal.SIGHUP)
-        try:
-            earlier = {number: signal.signal(number, note) for number in signals}
-        except ValueError:  # not the main thread
-            yield
-            return
-        try:
-            yield
-        finally:
-            for number, handler in earlier.items():
-                signal.signal(number, handler)
 
 
 def run_catalogue(source: Path, out: Path, options: Options, watch: Watch) -> Summary:
@@ -168,8 +77,8 @@ class _Run:
         self.source, self.stars, self.folder, self.store = source, stars, folder, store
         self.options, self.watch = options, watch
         self.log = LogFile(folder.log)
-        self.flag = _StopFlag()
-        self.items: dict[str, _Item] = {}
+        self.flag = StopFlag()
+        self.items: dict[str, Item] = {}
         self.heap: list[tuple[int, float, str]] = []
         self.computed = 0
         self.start_seconds: list[float] = []
@@ -179,7 +88,20 @@ class _Run:
 
     def go(self) -> Summary:
         start = time.monotonic()
-        run_id = self._plan()
+        plan = make_plan(
+            self.source,
+            self.stars,
+            self.folder,
+            self.store,
+            self.options,
+            self.log,
+            self.flag.check,
+        )
+        run_id = plan.run_id
+        for item in plan.items:
+            self._queue(item)
+        for name, fault in plan.faults.items():
+            self._say(f"{name}: failed, {fault}")
         kept = len(self.stars) - len(self.items)
         self._say(
             f"{len(self.stars)} stars, {kept} done already, {len(self.items)} to do; "
@@ -189,7 +111,7 @@ class _Run:
             if self.items:
                 self._screen_all(kept)
             self._draw_dossiers()
-        except Stopped:
+        except (Stopped, ClusterLost):
             self.store.end_run(run_id, "stopped")
             self._write_page()
             self._say("stopped; the same command goes on")
@@ -213,89 +135,10 @@ class _Run:
         self.log.write(text)
         self.watch.note(text)
 
-    # -- planning ---------------------------------------------------------------------------
-
-    def _plan(self) -> int:
-        options = self.options
-        rules = load_rules()
-        settings = RunSettings(
-            source=_text(self.source.absolute()),
-            version=__version__,
-            rules=rules.label,
-            rules_sha256=rules.sha256,
-            seed=options.seed,
-            depth=options.depth,
-            compared=None if options.compare is None else _text(options.compare.absolute()),
-        )
-        common: dict[str, str | int] = {
-            "version": __version__,
-            "rules": rules.sha256,
-            "seed": options.seed,
-            "depth": options.depth,
-        }
-        rows: list[tuple[StarRow, WorkRow]] = []
-        unread: set[str] = set()
-        for star in self.stars:
-            self._check_stop()
-            content = content_of(star)
-            if not content.complete or self._folder_fault(star) is not None:
-                unread.add(star.name)
-            key = work_key(star, content, common)
-            estimate = estimate_seconds(content, options.depth)
-            rows.append(
-                (
-                    _star_row(star),
-                    WorkRow(key, content.table, content.sidecar, content.photometry, estimate),
-                )
-            )
-        run_id = self.store.begin_run(settings)
-        planned = self.store.plan(run_id, rows)
-        for star, (_, work) in zip(self.stars, rows, strict=True):
-            state = planned[star.name]
-            if self._is_settled(star, state, star.name in unread):
-                continue
-            if state.state != "waiting":
-                self.store.again(star.name)
-            fault = self._folder_fault(star)
-            if fault is not None:
-                self.store.record_failure(star.name, "input", fault, final=True)
-                self._say(f"{star.name}: failed, {fault}")
-                continue
-            attempts = state.attempts if state.state == "waiting" else 0
-            self._queue(_Item(star, work.estimate, attempts, work.table_sha256))
-        return run_id
-
-    def _folder_fault(self, star: StarInput) -> str | None:
-        """What keeps the star from having a folder, or None."""
-        try:
-            self.folder.star(star.name)
-        except InputFault as fault:
-            return str(fault)
-        return None
-
-    def _is_settled(self, star: StarInput, state: Planned, unread: bool) -> bool:
-        """Whether nothing is left to do for a star."""
-        if state.state == "done":
-            if self.folder.verdict_sha256(star.name) == state.file_sha256:
-                return True
-            self.log.write(f"{star.name}: verdict.json is not what was recorded; done again")
-            return False
-        if state.state == "failed":
-            if unread or self.options.retry_failed:
-                return False
-            limits = {"time": self.options.limits.time, "memory": self.options.limits.memory}
-            raised = limits.get(state.failure_kind or "", 0.0) > (state.failure_limit or 0.0)
-            return not raised  # more time or memory than last time is a reason to try again
-        return False
-
-    def _queue(self, item: _Item) -> None:
+    def _queue(self, item: Item) -> None:
         self.items[item.star.name] = item
         # longest first; second attempts after all first ones
         heapq.heappush(self.heap, (item.attempts, -item.estimate, item.star.name))
-
-    def _check_stop(self) -> None:
-        if self.flag.signal is not None:
-            raise Stopped(signal.Signals(self.flag.signal).name)
 
     # -- screening --------------------------------------------------------------------------
 
@@ -303,7 +146,9 @@ class _Run:
         workers = min(self.options.workers, len(self.items))
         estimate = sum(item.estimate for item in self.items.values())
         executor = self._executor(self.options.work, workers)
-        tally = Tally(len(self.stars), kept, max(1, executor.free()), estimate)
+        if self.options.scheduler is not None:
+            workers = max(1, executor.free() // 2)  # a cluster takes two stars per thread
+        tally = Tally(len(self.stars), kept, workers, estimate)
         try:
             self._drive(executor, self._task, lambda event: self._ended(event, tally), tally)
         finally:
@@ -327,7 +172,7 @@ class _Run:
     ) -> None:
         """Keep the executor busy until the heap is empty and all tasks have ended."""
         while self.heap or executor.running():
-            self._check_stop()
+            self.flag.check()
             while self.heap and executor.free() > 0:
                 name = heapq.heappop(self.heap)[2]
                 executor.submit(name, payload(name))
@@ -384,7 +229,7 @@ class _Run:
         self.watch.star(text, tally)
         return None
 
-    def _mismatch(self, verdict: dict[str, Any], item: _Item) -> str | None:
+    def _mismatch(self, verdict: dict[str, Any], item: Item) -> str | None:
         """Why a verdict is not the answer to what was asked, or None."""
         asked = {"screener": __version__, "seed": self.options.seed, "depth": self.options.depth}
         for name, value in asked.items():
@@ -435,7 +280,7 @@ class _Run:
         if not missing:
             return
         self._say(f"drawing {len(missing)} dossiers")
-        self.items = {name: _Item(by_name[name], 0.0, 0, None) for name in missing}
+        self.items = {name: Item(by_name[name], 0.0, 0, None) for name in missing}
         self.heap = [(0, float(rank), name) for rank, name in enumerate(missing)]
         # drawing writes files: it stays on this machine even when a cluster did the screening
         workers = min(self.options.workers, len(missing))
@@ -472,21 +317,6 @@ class _Run:
 
         write_page(self.store, self.folder)
         self._page_time = time.monotonic()
-
-
-def _text(path: Path) -> str:
-    """A path as text that SQLite and JSON can bear."""
-    return os.fsencode(path).decode("utf-8", "backslashreplace")
-
-
-def _star_row(star: StarInput) -> StarRow:
-    return StarRow(
-        name=star.name,
-        folder=star.name,
-        table_file=_text(star.table),
-        sidecar_file=None if star.sidecar is None else _text(star.sidecar),
-        photometry_file=None if star.photometry is None else _text(star.photometry),
-    )
 
 
 def _count_words(numbers: dict[str, int]) -> str:

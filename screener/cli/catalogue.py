@@ -111,7 +111,7 @@ def command(
     """Screen every star of a FOLDER of tables, of a LIST with the path of a table per line, or of
     one table with a column for the star. RUN gets a folder per star, index.html to read in the
     morning, and catalogue.sqlite. Ends with 3 if some stars failed."""
-    from screener.catalogue import DiskFull, Limits, Options, Stopped, run_catalogue
+    from screener.catalogue import ClusterLost, DiskFull, Limits, Options, Stopped, run_catalogue
     from screener.catalogue.progress import choose_watch
 
     _check(exports, compare)
@@ -132,8 +132,8 @@ def command(
         again = shlex.join(["screener", *sys.argv[1:]])
         click.echo(f"Stopped; what is done is kept. To go on:\n  {again}", err=True)
         raise click.exceptions.Exit(EXIT_STOPPED) from None
-    except DiskFull as full:
-        click.echo(f"screener: {full}", err=True)
+    except (ClusterLost, DiskFull) as cause:
+        click.echo(f"screener: {cause}", err=True)
         raise click.exceptions.Exit(EXIT_INPUT) from None
     if as_json:
         click.echo(json.dumps(_as_dict(summary, out), indent=1, allow_nan=False))
