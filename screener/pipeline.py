@@ -34,7 +34,7 @@ from screener.models.nulls import DrawnSignal, NullDraws, injections, null_draws
 from screener.models.portrait import Portrait, Sighting, paint
 from screener.models.rotation import PeriodDensity, estimate_rotation
 from screener.rules import Graded, RuleSet, grade, load_rules
-from screener.system import describe_system
+from screener.system import describe_system, stability_findings
 
 __all__ = ["Progress", "screen"]
 
@@ -175,7 +175,28 @@ def _judge(
         )
         findings = run_all(case)
         judged.append(_Judged(case, findings, grade(findings, rules, signal)))
-    return judged, known
+    return _in_company(star, judged, known, rules), known
+
+
+def _in_company(
+    star: Star, judged: Sequence[_Judged], known: Sequence[Signal], rules: RuleSet
+) -> list[_Judged]:
+    """Grade again with what the other signals mean for each: planets must live together.
+
+    Signals that the first pass calls stellar are no bodies; taking one out changes the rest.
+    """
+    if not judged:
+        return []
+    first = judged[0].case
+    grades = {j.signal.id: j.graded.grade for j in judged}
+    found = stability_findings(
+        star, [*(j.signal for j in judged), *known], grades, seed=first.seed, depth=first.depth
+    )
+    out = []
+    for item in judged:
+        findings = (*item.findings, found[item.signal.id])
+        out.append(_Judged(item.case, findings, grade(findings, rules, item.signal)))
+    return out
 
 
 def _judge_draw(star: Star, rules: RuleSet, series: TimeSeries, seed: int) -> list[DrawnSignal]:

@@ -39,6 +39,13 @@ __all__ = ["command"]
 @click.option(
     "--rules", "rule_file", type=click.Path(path_type=Path), help="Rules to lay over the defaults."
 )
+@click.option(
+    "--format",
+    "formats",
+    type=click.Choice(["md", "pdf"]),
+    multiple=True,
+    help="Further formats of the dossier.",
+)
 @click.option("--json", "as_json", is_flag=True, help="Print the verdict as JSON on stdout.")
 def command(
     table: Path,
@@ -48,6 +55,7 @@ def command(
     depth: str,
     seed: int,
     rule_file: Path | None,
+    formats: tuple[str, ...],
     as_json: bool,
 ) -> None:
     """Screen the star in TABLE: verdict, dossier and figures."""
@@ -56,9 +64,14 @@ def command(
 
     observations = read_star(table, sidecar)  # a bad table is refused before the heavy imports
     from screener.pipeline import screen
-    from screener.report.dossier import write_dossier
-    from screener.report.terminal import print_summary
-    from screener.report.verdict_json import verdict_to_dict, write_verdict
+    from screener.report import (
+        print_summary,
+        save_products,
+        verdict_to_dict,
+        write_dossier,
+        write_tables,
+        write_verdict,
+    )
     from screener.rules import load_rules
 
     rules = load_rules(overlay=rule_file)
@@ -71,7 +84,10 @@ def command(
         )  # fmt: skip
         progress("dossier and figures", 0.98)
         write_verdict(folder / "verdict.json", screening.verdict)
-        write_dossier(screening, folder)
+        if screening.products is not None:
+            save_products(folder / "products.npz", screening.products)
+        write_tables(screening.verdict, folder)
+        write_dossier(screening, folder, formats=("html", *formats))
         progress("done", 1.0)
     if as_json:
         click.echo(json.dumps(verdict_to_dict(screening.verdict), indent=1, allow_nan=False))

@@ -6,6 +6,8 @@ nights per fitted parameter of the orbit. It never speaks for a planet or for th
 
 from __future__ import annotations
 
+import math
+
 import numpy as np
 
 from screener.core import Array, Finding, Outcome
@@ -28,6 +30,18 @@ def largest_phase_gap(time: Array, period: float) -> float:
     return float(np.max(np.append(np.diff(phase), phase[0] + 1.0 - phase[-1])))
 
 
+def noise_floor(rv_sd: Array) -> float:
+    """Smallest amplitude that these velocities can carry, m/s.
+
+    Three times the error of an amplitude in white noise of ``rv_sd``, shape (n_obs,), but never
+    below 0.2 m/s: no spectrograph has shown a better stability over years (common practice, no
+    source).
+    """
+    if rv_sd.size == 0:
+        return math.inf
+    return max(3 * math.sqrt(2 / float(np.sum(1 / rv_sd**2))), 0.2)
+
+
 def run(case: Case) -> Finding:
     """The finding for one signal; always inconclusive, the numbers are for the rules."""
     series, period = case.series, case.signal.orbit.period
@@ -47,6 +61,7 @@ def run(case: Case) -> Finding:
         "period_over_baseline": period / series.baseline if series.baseline > 0.0 else None,
         "cycles_in_baseline": covered,
         "cycles_observed": int(np.unique(cycles).size),
+        "noise_floor": noise_floor(case.rv_sd),
     }
     nights = series.n_nights
     weak = []

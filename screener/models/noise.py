@@ -34,7 +34,7 @@ class NoiseModel:
     derivative: tuple[bool, ...]
     prior: HyperPrior
     scale: float  # m/s per scaled unit of the velocities
-    max_iterations: int = 60
+    max_iterations: int = 120
     n_evaluations: int = 0
     _fits: dict[tuple[OrbitTerm, ...], Fit] = field(default_factory=dict)
 
