@@ -173,39 +173,39 @@ def eccentric_or_two(
     n = time.size
     if n < 12 or not math.isfinite(orbit.period) or np.ptp(time) <= 0:
         return {"sentence": "Too few velocities to tell one eccentric orbit from two circular."}
-    data = _prepare(time, rv, sd, nuisance)
-    step = min(0.05, 0.1 * orbit.period / float(np.ptp(time)))
-    k_base = data.basis.shape[1]
+    return _conclude(_compare(_prepare(time, rv, sd, nuisance), orbit, other_period))
+
+
+def _compare(data: _Data, orbit: Orbit, other_period: bool) -> dict[str, dict[str, Any]]:
+    """chi2, number of parameters, BIC and periods of every hypothesis."""
+    n, baseline = data.time.size, float(np.ptp(data.time))
+    step = min(0.05, 0.1 * orbit.period / baseline)
     hypotheses: dict[str, dict[str, Any]] = {}
 
     def record(name: str, chi2: float, k: int, penalty: float = 0.0, **numbers: float) -> None:
+        parameters = k + data.basis.shape[1]
         hypotheses[name] = {
             "chi2": chi2,
-            "n_parameters": k + k_base,
-            "bic": chi2 + (k + k_base) * math.log(n) + penalty,
+            "n_parameters": parameters,
+            "bic": chi2 + parameters * math.log(n) + penalty,
             **numbers,
         }
 
+    def record_two(name: str, second: float, step: float, penalty: float = 0.0) -> None:
+        chi2, pair = _fit_circles(data, [period, second], step)
+        record(name, chi2, 6, penalty, period_d=float(pair[0]), second_d=float(pair[1]))
+
     chi2, periods = _fit_circles(data, [orbit.period], step)
-    record("one circular", chi2, 3, period_d=float(periods[0]))
-    best_period = float(periods[0])
-    chi2, x = _fit_eccentric(data, best_period, step)
+    period = float(periods[0])
+    record("one circular", chi2, 3, period_d=period)
+    chi2, x = _fit_eccentric(data, period, step)
     record("one eccentric", chi2, 5, period_d=math.exp(x[0]), eccentricity=float(x[1]))
-    chi2, periods = _fit_circles(data, [best_period, best_period / 2], step)
-    record("two circular in 2:1", chi2, 6, period_d=float(periods[0]), second_d=float(periods[1]))
-    if other_period and (found := _second_period(data, best_period)) is not None:
+    record_two("two circular in 2:1", period / 2, step)
+    if other_period and (found := _second_period(data, period)) is not None:
         second, tried = found
-        fine = min(step, 0.1 * second / float(np.ptp(time)))
-        chi2, periods = _fit_circles(data, [best_period, second], fine)
-        record(
-            "two circular",
-            chi2,
-            6,
-            2 * math.log(tried),
-            period_d=float(periods[0]),
-            second_d=float(periods[1]),
-        )
-    return _conclude(hypotheses)
+        fine = min(step, 0.1 * second / baseline)
+        record_two("two circular", second, fine, 2 * math.log(tried))
+    return hypotheses
 
 
 def _conclude(hypotheses: dict[str, dict[str, Any]]) -> dict[str, Any]:

@@ -36,7 +36,7 @@ from screener.system.schedule import NightPlan, plan_as_dict, rank_nights
 from screener.system.sensitivity import sensitivity_summary
 from screener.system.stability import pair_stability
 
-__all__ = ["describe_system", "json_ready", "target_velocities"]
+__all__ = ["describe_system", "json_ready", "references_used", "target_velocities"]
 
 _QUICK_DRAWS, _DRAWS = 1000, 8000
 _MAX_PLANS = 2
@@ -360,3 +360,27 @@ def json_ready(value: Any) -> Any:
     if isinstance(value, (float, np.floating)):
         return float(value) if math.isfinite(value) else None
     return value
+
+
+def references_used(description: Mapping[str, Any]) -> tuple[str, ...]:
+    """Citation keys of the methods behind a description made by ``describe_system``."""
+    keys: set[str] = set()
+    planets = [p for p in (description.get("planets") or {}).values() if p]
+    if planets:
+        keys |= {"cumming2008", "ho2011"}
+        if any("aligned with the star's spin" in p["true_mass"] for p in planets):
+            keys.add("masuda2020")
+        if any(p["transit"] for p in planets):
+            keys |= {"barnes2007", "chen2017", "winn2010"}
+    stability = description.get("stability") or {}
+    if stability.get("pairs"):
+        keys |= {"gladman1993", "laskar2017"}
+    if stability.get("n_body"):
+        keys.add("rein2012")
+    if description.get("outer_companion"):
+        keys.add("feng2015")
+    if description.get("alternatives"):
+        keys |= {"angladaescude2010", "kass1995", "kurster2015"}
+    if any((description.get("nights") or {}).values()):
+        keys |= {"dawson2010", "giles2017", "haywood2014", "kolchinsky2017", "saar1997"}
+    return tuple(sorted(keys))

@@ -47,6 +47,10 @@ def spot_flux_amplitude(velocity_amplitude: float, vsini: float) -> float:
     return float(0.5 * percent / 100.0)
 
 
+def _count(worth: float) -> str:
+    return "more than 20" if worth > 20 else f"{worth:.1f}"
+
+
 def _variance_odds(ratio: float) -> float:
     """Expected log-odds of one value for extra variance ``ratio`` times that of the noise."""
     return 0.5 * (ratio - math.log1p(ratio))
@@ -118,7 +122,13 @@ def extra_measurements(
         )
     )
     result = [
-        ExtraMeasurement(name, odds, odds / base, sentence[0].upper() + sentence[1:] + ".")
+        ExtraMeasurement(
+            name,
+            odds,
+            odds / base,
+            f"{name[0].upper()}{name[1:]}, worth {_count(odds / base)} of the best velocities: "
+            f"{sentence}.",
+        )
         for name, odds, sentence in rows
     ]
     return tuple(sorted(result, key=lambda e: -e.log_odds))

@@ -26,6 +26,7 @@ from screener.system.hypotheses import (
 )
 from screener.system.measurements import ExtraMeasurement, extra_measurements
 from screener.system.observability import (
+    NightTimes,
     find_site,
     nights_from_data,
     nights_from_site,
@@ -45,6 +46,7 @@ __all__ = [
 THRESHOLD = math.log(100.0)  # natural log-odds at which a question counts as settled
 _MAX_DATA = 400
 _MAX_SOUGHT = 30
+_RECENT = 20
 _MIN_WEIGHT = 1e-3
 
 
@@ -256,28 +258,55 @@ def rank_nights(
     order = np.argsort(time)
     everything = Velocities(time[order], rv[order], sd[order])
     begin = float(everything.time[-1]) if start is None else start
-    name: str | None = None
-    if star.ra_deg is not None and star.dec_deg is not None:
-        place = find_site(site) if site else site_for(star)
-        name = place.name
-        nights = nights_from_site(star, place, begin, days)
-    else:
-        if site:
-            find_site(site)  # a wrong name is told even where it does not matter
-        nights = nights_from_data(everything.time, begin, days)
+    nights, name = _usable(star, everything.time, site, begin, days)
     if nights.time.size == 0:
         return NightPlan(
             (), None, threshold, (), (), name, "No usable night: the star never stands well."
         )
     data = everything.latest(_MAX_DATA)
     hypotheses, shape = live_hypotheses(data, orbit, rotation_period)
-    new_sd = np.full(nights.time.size, float(np.median(data.sd)))
+    # what the telescope in use reaches now, not what older ones did
+    new_sd = np.full(nights.time.size, float(np.median(data.sd[-_RECENT:])))
     forecasts = [forecast(h, data, nights.time, new_sd) for h in hypotheses]
     weights = np.array([h.weight for h in hypotheses])
     chosen, alone = order_nights(forecasts, weights, max(n_ranked, _MAX_SOUGHT), nights.night)
     gains = _expected_log_odds(forecasts[0], forecasts[-1], chosen, log_odds)
     needed = next((k + 1 for k, g in enumerate(gains) if g >= threshold), None)
-    table = tuple(
+    shown = min(n_ranked, len(chosen))
+    extra = extra_measurements(
+        star, everything, orbit, gains[shown - 1] / shown, indicators,
+        rotation_period=rotation_period,
+    )  # fmt: skip
+    return NightPlan(
+        nights=_rows(nights, forecasts, chosen[:shown], gains, alone),
+        nights_needed=needed,
+        threshold=threshold,
+        hypotheses=tuple((h.name, h.weight, h.period) for h in hypotheses),
+        extra=extra,
+        site=name,
+        sentence=_summary(nights.sentence, shown, gains, needed, extra, shape),
+    )
+
+
+def _usable(
+    star: Star, times: Array, site: str | None, begin: float, days: int
+) -> tuple[NightTimes, str | None]:
+    """Usable nights and the name of the site, None where the star has no coordinates."""
+    place = find_site(site) if site else site_for(star)  # a wrong name is told in any case
+    if star.ra_deg is None or star.dec_deg is None:
+        return nights_from_data(times, begin, days), None
+    return nights_from_site(star, place, begin, days), place.name
+
+
+def _rows(
+    nights: NightTimes,
+    forecasts: Sequence[Forecast],
+    chosen: Sequence[int],
+    gains: Sequence[float],
+    alone: Array,
+) -> tuple[Night, ...]:
+    """The table: the first forecast is the planet's, the last the star's."""
+    return tuple(
         Night(
             rank=k + 1,
             time=float(nights.time[i]),
@@ -289,20 +318,7 @@ def rank_nights(
             moon_distance=_known(nights.moon_distance[i]),
             moon_lit=_known(nights.moon_lit[i]),
         )
-        for k, i in enumerate(chosen[:n_ranked])
-    )
-    per_night = gains[len(table) - 1] / len(table)
-    extra = extra_measurements(
-        star, everything, orbit, per_night, indicators, rotation_period=rotation_period
-    )
-    return NightPlan(
-        nights=table,
-        nights_needed=needed,
-        threshold=threshold,
-        hypotheses=tuple((h.name, h.weight, h.period) for h in hypotheses),
-        extra=extra,
-        site=name,
-        sentence=_summary(nights.sentence, len(table), gains, needed, extra, shape),
+        for k, i in enumerate(chosen)
     )
 
 

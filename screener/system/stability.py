@@ -14,7 +14,7 @@ from typing import Any
 import numpy as np
 from astropy import constants
 
-from screener.core import Array, Depth, Finding, Orbit, Outcome, Signal, Star
+from screener.core import Array, Orbit, Signal, Star
 from screener.system.masses import (
     isotropic_sin_i,
     mass_function,
@@ -34,7 +34,6 @@ __all__ = [
     "near_commensurability",
     "orbits_cross",
     "pair_stability",
-    "stability_finding",
 ]
 
 GLADMAN_LIMIT = 2.0 * math.sqrt(3.0)  # mutual Hill radii, circular orbits
@@ -42,8 +41,6 @@ _M_JUP_SUN = float(constants.GM_jup.si.value / constants.GM_sun.si.value)
 _GM_SUN = float(constants.GM_sun.si.value)
 _AU = float(constants.au.si.value)
 _DAY = 86400.0
-_UNSTABLE = 0.95  # share of draws that must fail before a solution is called unstable
-_REFERENCES = ("gladman1993", "laskar2017")
 
 
 @dataclass(frozen=True)
@@ -286,119 +283,3 @@ def _judge_pairs(system: _Draws) -> tuple[PairStability, ...]:
             )
         )
     return tuple(pairs)
-
-
-def _not_applicable(reason: str) -> Finding:
-    return Finding("stability", Outcome.NOT_APPLICABLE, reason, references=_REFERENCES)
-
-
-def _strength(signal: Signal) -> float:
-    """How well a signal stands by itself; known planets stand above all."""
-    if signal.known:
-        return math.inf
-    orbit = signal.orbit
-    if orbit.semi_amplitude_err:
-        return orbit.semi_amplitude / orbit.semi_amplitude_err
-    return max(signal.white_gain, signal.activity_gain)
-
-
-def stability_finding(
-    star: Star,
-    signal: Signal,
-    others: Sequence[Signal],
-    *,
-    seed: int,
-    depth: Depth = Depth.STANDARD,
-    pairs: Sequence[PairStability] | None = None,
-    survival: float | None = None,
-) -> Finding:
-    """Whether ``signal`` can live beside ``others``, the signals that are taken for planets.
-
-    An unstable pair counts against the weaker of its two signals only. Unstable means: in 95 % of
-    the draws the orbits cross and no first- or second-order resonance could keep the bodies
-    apart, or the bodies violate Gladman's criterion while closer than 2 sqrt(3) Hill radii, or
-    fewer than 5 % of the N-body draws (``survival``) last. AMD-instability alone decides nothing.
-    Orbits that are stable are no evidence for a planet, hence "inconclusive".
-
-    The statistic is the share of draws in which the pair fails; there is no null hypothesis and
-    so no p-value. ``pairs`` saves computing them twice.
-    """
-    if not others:
-        return _not_applicable("There is no second planet in this solution.")
-    if star.mass is None:
-        return _not_applicable("Without a stellar mass the orbits have no sizes.")
-    if pairs is None:
-        n_draws = 300 if depth is Depth.QUICK else 2000
-        pairs = pair_stability(
-            star, [signal, *others], np.random.default_rng(seed), n_draws=n_draws
-        )
-    by_id = {s.id: s for s in (signal, *others)}
-    mine = [p for p in pairs if signal.id in (p.inner, p.outer)]
-    if not mine:
-        return _not_applicable("The amplitudes of this solution give no masses.")
-    worst = max(mine, key=_failing)
-    partner = by_id[worst.outer if worst.inner == signal.id else worst.inner]
-    weaker = _strength(signal) < _strength(partner)
-    share = _failing(worst)
-    near = worst.commensurability
-    resonant = near.near and near.p - near.q <= 2
-    parameters: dict[str, Any] = {
-        "partner": partner.id,
-        "crossing": worst.crossing,
-        "hill_unstable": worst.hill_unstable,
-        "amd_unstable": worst.amd_unstable,
-        "hill_separation": worst.hill_separation,
-        "near_resonance": f"{near.p}:{near.q}" if near.near else None,
-        "survival": survival,
-        "weaker": weaker,
-    }
-    lost = survival is not None and survival < 1 - _UNSTABLE
-    saved = survival is not None and survival >= 0.5
-    unstable = lost or (share >= _UNSTABLE and not resonant and not saved)
-    if unstable and weaker:
-        sentence = (
-            f"The orbit cannot last beside {partner.id} ({partner.orbit.period:.4g} d): it fails "
-            f"in {100 * share:.0f} % of the draws; the weaker of the two is not a planet on "
-            "this orbit."
-        )
-        return Finding(
-            "stability",
-            Outcome.SUPPORTS_STAR,
-            sentence,
-            share,
-            None,
-            None,
-            parameters,
-            _REFERENCES,
-        )
-    sentence = _stable_sentence(partner, worst, share, unstable, resonant)
-    return Finding(
-        "stability", Outcome.INCONCLUSIVE, sentence, share, None, None, parameters, _REFERENCES
-    )
-
-
-def _failing(pair: PairStability) -> float:
-    """Share of draws in which a pair is lost by geometry or by Hill's criterion."""
-    packed = pair.hill_unstable if pair.hill_separation < GLADMAN_LIMIT else 0.0
-    return max(pair.crossing, packed)
-
-
-def _stable_sentence(
-    partner: Signal, pair: PairStability, share: float, unstable: bool, resonant: bool
-) -> str:
-    name = f"{partner.id} ({partner.orbit.period:.4g} d)"
-    if unstable:
-        return f"The orbit cannot last beside {name}, the weaker of the two signals."
-    if share >= _UNSTABLE and resonant:
-        near = pair.commensurability
-        return (
-            f"Crosses the orbit of {name}; only the {near.p}:{near.q} resonance could protect it."
-        )
-    if share > 1 - _UNSTABLE:
-        return f"Beside {name} the orbit fails in {100 * share:.0f} % of the draws."
-    if pair.amd_unstable > 0.5:
-        return (
-            f"Keeps {pair.hill_separation:.1f} Hill radii from {name}; AMD-unstable as fitted, "
-            "which large fitted eccentricities bring about easily."
-        )
-    return f"Stable beside {name}: {pair.hill_separation:.1f} mutual Hill radii apart."

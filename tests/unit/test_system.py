@@ -10,8 +10,9 @@ import pytest
 from scipy import stats
 
 from screener.core import Array, Depth, Grade, Orbit, Signal, Star, TimeSeries
+from screener.core.references import REFERENCES
 from screener.models.kepler import keplerian_velocity, orbit_velocity
-from screener.system import describe_system, target_velocities
+from screener.system import describe_system, references_used, target_velocities
 from screener.system.alternatives import eccentric_or_two
 from screener.system.describe import json_ready
 from screener.system.sensitivity import detection_limits, injection_check, sensitivity_summary
@@ -181,6 +182,9 @@ def test_standard_description_is_whole_json_and_repeatable() -> None:
     assert len(parsed["nights"]["S2"]["nights"]) == 10 and "S1" not in parsed["nights"]
     assert parsed["outer_companion"]["mass_min_mjup"] > 0
     assert len(parsed["sentences"]) >= 6
+    used = references_used(parsed)
+    assert {"laskar2017", "kurster2015", "dawson2010"} <= set(used) & set(REFERENCES)
+    assert "rein2012" not in used
 
 
 def test_bare_star_and_stellar_signals_are_described_without_complaint() -> None:

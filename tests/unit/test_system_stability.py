@@ -9,7 +9,8 @@ import numpy as np
 import pytest
 from scipy.optimize import brentq
 
-from screener.core import Depth, Orbit, Outcome, Signal, Star
+from screener.core import Depth, Grade, Orbit, Outcome, Signal, Star
+from screener.system.company import stability_finding, stability_findings
 from screener.system.nbody import nbody_available, nbody_check
 from screener.system.stability import (
     GLADMAN_LIMIT,
@@ -20,7 +21,6 @@ from screener.system.stability import (
     near_commensurability,
     orbits_cross,
     pair_stability,
-    stability_finding,
 )
 
 SUN = Star("made-up sun", mass=1.0, mass_err=0.01)
@@ -178,6 +178,26 @@ def test_no_company_no_mass_not_applicable() -> None:
     one, two = _signal("S1", 10.0, 5.0), _signal("S2", 100.0, 3.0)
     assert stability_finding(SUN, one, [], seed=1).outcome is Outcome.NOT_APPLICABLE
     assert stability_finding(Star("s"), one, [two], seed=1).outcome is Outcome.NOT_APPLICABLE
+
+
+def test_signals_of_the_star_neither_suffer_nor_condemn() -> None:
+    """A spot pattern has no orbit: crossing one proves nothing."""
+    spot = _signal("S1", 300.0, 50.0)
+    planet = _signal("S2", 430.0, 9.0, ecc=0.6, err=1.0)
+    grades = {"S1": Grade.LIKELY_STELLAR, "S2": Grade.AMBIGUOUS}
+    found = stability_findings(SUN, [spot, planet], grades, seed=1)
+    assert {f.outcome for f in found.values()} == {Outcome.NOT_APPLICABLE}
+    both = stability_findings(SUN, [spot, planet], {**grades, "S1": Grade.PLANETARY}, seed=1)
+    assert both["S2"].outcome is Outcome.SUPPORTS_STAR
+    assert both["S1"].outcome is Outcome.INCONCLUSIVE
+
+
+def test_known_planets_outrank_signals() -> None:
+    known = Signal("K1", Orbit(300.0, 20.0), 0.0, ("known",), known=True)
+    strong = _signal("S1", 315.0, 60.0)
+    found = stability_findings(SUN, [strong, known], {"S1": Grade.PLANETARY}, seed=1)
+    assert set(found) == {"S1"}
+    assert found["S1"].outcome is Outcome.SUPPORTS_STAR
 
 
 @pytest.mark.skipif(not nbody_available(), reason="needs the optional package rebound")
