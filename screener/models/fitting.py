@@ -10,9 +10,9 @@ import numpy as np
 from scipy.optimize import minimize
 
 from screener.core import Array, NumericalError
-from screener.models.joint import JointModel, OrbitTerm
+from screener.models.joint import JointModel
 
-__all__ = ["Fit", "HyperPrior", "fit", "starting_point"]
+__all__ = ["Fit", "HyperPrior", "fit", "prior_terms", "starting_point"]
 
 _REFUSED = 1e12
 
@@ -74,7 +74,7 @@ class Fit:
     converged: bool
 
 
-def _prior_terms(model: JointModel, prior: HyperPrior) -> tuple[Array, Array, Array, Array]:
+def prior_terms(model: JointModel, prior: HyperPrior) -> tuple[Array, Array, Array, Array]:
     """Mean, sd, lower and upper bound of every parameter."""
     n = model.n_parameters
     mean, sd = np.zeros(n), np.full(n, np.inf)
@@ -115,7 +115,7 @@ def starting_point(
     ``slope`` is the amplitude on the derivative: whether velocities lead or follow the process
     makes two optima with a barrier between them.
     """
-    mean, _, lower, upper = _prior_terms(model, prior)
+    mean, _, lower, upper = prior_terms(model, prior)
     out = mean.copy()
     if model.kernel is not None:
         out[model.slices["a"]] = 0.6
@@ -135,7 +135,7 @@ def fit(
     NumericalError
         If no start leads to a finite optimum; the message carries the last cause.
     """
-    mean, sd, lower, upper = _prior_terms(model, prior)
+    mean, sd, lower, upper = prior_terms(model, prior)
     inverse = 1 / sd
     cause: NumericalError | None = None
 
@@ -189,6 +189,5 @@ def _occam(result: Fit) -> float:
     return float(np.log(sd).sum() - 0.5 * log_det + 0.5 * np.sum((mean / sd) ** 2))
 
 
-def orbit_terms(periods: Sequence[float], amplitude_sd: float) -> tuple[OrbitTerm, ...]:
-    """Circular orbits at these periods."""
-    return tuple(OrbitTerm(p, amplitude_sd) for p in periods)
+# the private name that this function had first
+_prior_terms = prior_terms
