@@ -2,7 +2,8 @@
 
 from screener.system.company import stability_finding, stability_findings
 from screener.system.describe import describe_system, references_used, target_velocities
-from screener.system.schedule import NightPlan, rank_nights, write_nights
+from screener.system.plan_output import write_nights
+from screener.system.schedule import NightPlan, rank_nights
 
 __all__ = [
     "NightPlan",

@@ -32,7 +32,8 @@ from screener.system.masses import (
     transit_forecast,
 )
 from screener.system.nbody import NBodyOutcome, nbody_available, nbody_check
-from screener.system.schedule import NightPlan, plan_as_dict, rank_nights
+from screener.system.plan_output import plan_as_dict
+from screener.system.schedule import NightPlan, rank_nights
 from screener.system.sensitivity import sensitivity_summary
 from screener.system.stability import pair_stability
 

@@ -19,6 +19,7 @@ from screener.core import Array, NumericalError, Orbit
 from screener.models.kepler import orbit_columns
 
 __all__ = [
+    "SLOWEST_ROTATION",
     "Forecast",
     "Hypothesis",
     "Velocities",
@@ -37,6 +38,7 @@ __all__ = [
 _SIDEREAL_DAY = 1.0027379  # cycles per day
 _YEAR = 365.25
 _MONTH = 29.530589
+SLOWEST_ROTATION = 150.0  # d: what recurs more slowly is a magnetic cycle, not spots
 _SPOT_TURNS, _SPOT_SPREAD = 1.5, 0.7  # lifetime of a pattern in turns, and its spread in ln
 _LIVE = math.log(1000.0)  # an alias that fits worse by more is dead
 
@@ -171,11 +173,12 @@ def activity_hypothesis(
 ) -> tuple[Hypothesis, tuple[float, float, float, float]]:
     """The star alone: the likeliest quasi-periodic process over a small grid.
 
-    ``periods`` (d) are tried with decay times of 0.7 to 6 periods (10 to 300 d), two degrees of
-    smoothness and three amplitudes about the scatter. Spots live for one to a few turns (Giles,
-    Collier Cameron & Haywood 2017, MNRAS 472, 1618), so decay times carry a lognormal prior about
-    1.5 turns, without which every planet is matched best by a star that never changes. Returns the
-    hypothesis (prior included in its likelihood) and amplitude, period, decay time, smoothness.
+    ``periods`` (d) are tried with decay times of 0.7 to 6 periods (10 to 300 d for a rotation,
+    longer for a cycle), two degrees of smoothness and three amplitudes about the scatter. Spots
+    live for one to a few turns (Giles, Collier Cameron & Haywood 2017, MNRAS 472, 1618), so decay
+    times carry a lognormal prior about 1.5 turns, without which every planet is matched best by a
+    star that never changes. Returns the hypothesis (prior included in its likelihood) and
+    amplitude, period, decay time, smoothness.
     """
     scatter = float(np.std(data.rv))
     excess = math.sqrt(max(scatter**2 - float(np.median(data.sd)) ** 2, 0.1 * scatter**2))
@@ -183,7 +186,9 @@ def activity_hypothesis(
     for period, turns, smooth, scale in product(
         periods, (0.7, 1.5, 3.0, 6.0), (0.4, 0.9), (0.75, 1.1, 1.6)
     ):
-        decay = min(max(turns * period, 10.0), 300.0)
+        decay = max(turns * period, 10.0)
+        if period < SLOWEST_ROTATION:
+            decay = min(decay, 300.0)
         shape = (scale * excess, period, decay, smooth)
         value = log_likelihood(quasi_periodic(*shape), data)
         value -= 0.5 * (math.log(turns / _SPOT_TURNS) / _SPOT_SPREAD) ** 2

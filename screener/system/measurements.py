@@ -14,7 +14,7 @@ import numpy as np
 from astropy import constants
 
 from screener.core import Indicator, Orbit, Star
-from screener.system.hypotheses import Velocities
+from screener.system.hypotheses import SLOWEST_ROTATION, Velocities
 
 __all__ = ["ExtraMeasurement", "extra_measurements", "spot_flux_amplitude"]
 
@@ -69,6 +69,31 @@ def _correlation(indicator: Indicator, data: Velocities) -> float:
     return math.sqrt(max(r * r - 1 / n, 0.0))
 
 
+def _spot_measurements(
+    star: Star, data: Velocities, k: float, rotation_period: float | None
+) -> list[tuple[str, float, str]]:
+    """Photometry and near-infrared velocities: name, log-odds a night, reason."""
+    vsini = star.vsini / 1000.0 if star.vsini else _DEFAULT_VSINI
+    if not star.vsini and star.radius and rotation_period:
+        vsini = 2 * math.pi * star.radius * _R_SUN_KM / (rotation_period * 86400.0)
+    flux = spot_flux_amplitude(k, vsini)
+    contrast = (1 - _INFRARED_SHARE) * k
+    noise = float(np.median(data.sd)) ** 2 * (1 + _INFRARED_ERROR**2)
+    return [
+        (
+            "photometry",
+            _variance_odds(0.5 * (flux / _PHOTOMETRIC_ERROR) ** 2),
+            f"spots of this amplitude would vary the flux by {1e3 * flux:.1f} parts in a thousand",
+        ),
+        (
+            "near-infrared velocities",
+            _variance_odds(0.5 * contrast**2 / noise),
+            f"of the star's {k:.1f} m/s about {_INFRARED_SHARE * k:.1f} would be left there, "
+            "of a planet's all",
+        ),
+    ]
+
+
 def extra_measurements(
     star: Star,
     data: Velocities,
@@ -80,32 +105,13 @@ def extra_measurements(
 ) -> tuple[ExtraMeasurement, ...]:
     """Photometry, near-infrared velocities and indicators, the most telling first.
 
-    ``velocity_odds`` is the expected log-odds of one well-chosen velocity.
+    ``velocity_odds`` is the expected log-odds of one well-chosen velocity. The first two look for
+    spots and are left out where the signal is slower than any rotation.
     """
-    k = orbit.semi_amplitude
-    error = float(np.median(data.sd))
     base = max(velocity_odds, 1e-3)
-    vsini = star.vsini / 1000.0 if star.vsini else _DEFAULT_VSINI
-    if not star.vsini and star.radius and rotation_period:
-        vsini = 2 * math.pi * star.radius * _R_SUN_KM / (rotation_period * 86400.0)
-    flux = spot_flux_amplitude(k, vsini)
-    rows = [
-        (
-            "photometry",
-            _variance_odds(0.5 * (flux / _PHOTOMETRIC_ERROR) ** 2),
-            f"spots of this amplitude would vary the flux by {1e3 * flux:.1f} parts in a thousand",
-        )
-    ]
-    contrast = (1 - _INFRARED_SHARE) * k
-    noise = error**2 * (1 + _INFRARED_ERROR**2)
-    rows.append(
-        (
-            "near-infrared velocities",
-            _variance_odds(0.5 * contrast**2 / noise),
-            f"of the star's {k:.1f} m/s about {_INFRARED_SHARE * k:.1f} would be left there, "
-            "of a planet's all",
-        )
-    )
+    rows: list[tuple[str, float, str]] = []
+    if orbit.period < SLOWEST_ROTATION:
+        rows = _spot_measurements(star, data, orbit.semi_amplitude, rotation_period)
     if indicators:
         correlation = max(_correlation(i, data) for i in indicators)
         reason = (

@@ -30,7 +30,8 @@ from screener.system.observability import (
     nights_from_data,
     nights_from_site,
 )
-from screener.system.schedule import order_nights, rank_nights, write_nights
+from screener.system.plan_output import write_nights
+from screener.system.schedule import order_nights, rank_nights
 
 T0 = 2459000.5
 ORBIT = Orbit(25.0, 5.0, 0.0, 0.0, T0, 0.05, 0.7)
@@ -258,6 +259,17 @@ def test_short_lived_activity_needs_fewer_nights_than_long_lived() -> None:
             )
         )
     assert known[0] > known[1]
+
+
+def test_a_slow_signal_is_held_against_a_cycle_not_against_spots() -> None:
+    """A cycle of years does not change within one: a single season must not seem to settle it."""
+    rng = np.random.default_rng(12)
+    orbit = Orbit(4000.0, 6.0, 0.0, 0.0, T0, 200.0, 0.6)
+    time = np.sort(T0 + rng.choice(3000, 80, replace=False) + 0.1 * rng.random(80))
+    rv = orbit_velocity(orbit, time) + rng.normal(0, 3, 80)
+    plan = rank_nights(Star("s"), time, rv, np.full(80, 3.0), orbit)
+    assert plan.nights_needed is None
+    assert {e.name for e in plan.extra} == {"a line-shape or chromospheric indicator"}
 
 
 def test_spot_amplitude_grows_with_velocity_and_falls_with_rotation() -> None:
