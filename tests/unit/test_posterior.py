@@ -23,11 +23,12 @@ def _series(rng: np.random.Generator, n: int = 50) -> TimeSeries:
     return TimeSeries(time, rv, np.full(n, 0.4), np.zeros(n, dtype=np.intp), ("A",), (other,))
 
 
+@pytest.mark.slow
 def test_amplitude_and_period_of_a_known_orbit() -> None:
     rng = np.random.default_rng(3)
     noise = white_noise(scaled_data(_series(rng), (), 1000.0))
     best = noise.fit([noise.term(9.0)], fresh=True)
-    result = sample(noise, best, np.full(best.parameters.size, 0.1), rng, n_steps=1200)
+    result = sample(noise, best, np.full(best.parameters.size, 0.1), rng, n_steps=2400)
     assert result.converged
     assert result.r_hat < 1.05
     amplitude, period = result.semi_amplitudes[0], result.periods[0]
