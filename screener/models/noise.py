@@ -67,6 +67,11 @@ class NoiseModel:
             self._fits[key] = result
         return self._fits[key]
 
+    @property
+    def kernel_name(self) -> str:
+        """The kernel's key in ``KERNELS``, "" in white noise."""
+        return next((name for name, kernel in KERNELS.items() if kernel is self.kernel), "")
+
     def known(self, orbits: Sequence[OrbitTerm]) -> Fit | None:
         """The fit with these orbits if there was one already."""
         return self._fits.get(tuple(orbits))

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import math
 from collections.abc import Callable, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 
@@ -21,12 +21,15 @@ from screener.models.exploration import (
 from screener.models.fitting import Fit, HyperPrior
 from screener.models.joint import OrbitTerm
 from screener.models.kepler import orbit_velocity
+from screener.models.laplace import OrbitErrors, laplace
 from screener.models.noise import NoiseModel, joint_process, white_noise
 from screener.models.rotation import PeriodDensity
+from screener.models.selection import choose_kernel
 
 __all__ = ["Portrait", "Sighting", "paint", "rotation_prior"]
 
 _INDICATORS = {Depth.QUICK: 3, Depth.STANDARD: 3, Depth.DEEP: 4}
+_KERNELS_UP_TO = 400  # velocities; the slower kernels are not tried on longer series
 _UNKNOWN_ROTATION = HyperPrior(math.log(25.0), 0.6)
 
 
@@ -38,12 +41,21 @@ class Sighting:
     false_alarm_probability: float
     found_by: tuple[str, ...]
     assessment: Assessment
+    errors: OrbitErrors | None = None  # of the whole model, from standard depth on
 
     @property
     def orbit(self) -> Orbit:
         """Under the activity model where the signal is part of it, else in white noise."""
         inside = self.assessment.in_activity_set
-        return self.assessment.orbit if inside else self.assessment.white_orbit
+        orbit = self.assessment.orbit if inside else self.assessment.white_orbit
+        if self.errors is None:
+            return orbit
+        return replace(
+            orbit,
+            period_err=self.errors.period or orbit.period_err,
+            semi_amplitude_err=self.errors.semi_amplitude,
+            eccentricity_err=self.errors.eccentricity,
+        )
 
 
 @dataclass(frozen=True, eq=False)
@@ -67,6 +79,7 @@ class Portrait:
     slope: float  # m/s per d
     slope_err: float
     comparisons: tuple[ModelComparison, ...]
+    kernel_evidence: dict[str, float]
 
 
 def rotation_prior(density: PeriodDensity | None) -> HyperPrior:
@@ -109,6 +122,15 @@ def paint(
     on_top = search_activity(series, process, known, depth, hints)
     progress("comparing models", 0.45)
     known_terms = [white.term(k.period) for k in known]
+    kernel_evidence: dict[str, float] = {}
+    if depth is not Depth.QUICK and series.n_obs <= _KERNELS_UP_TO:
+        inside = [*known_terms, *(f.term for f in on_top.found)]
+        choice = choose_kernel(scaled, prior, process, on_top.fit, inside)
+        kernel_evidence = choice.log_evidence
+        if choice.noise is not process:
+            process = choice.noise
+            bare = process.fit(known_terms, near=[], fresh=True)
+            on_top = replace(on_top, fit=choice.fit, fits=(bare, *on_top.fits[1:]))
     found = _united(on_top.found, in_white.found, series.baseline)
     terms = [f.term for f, _ in found]
     activity_terms = [*known_terms, *(f.term for f in on_top.found)]
@@ -123,8 +145,10 @@ def paint(
             in_white.frequency,
         )  # fmt: skip
         sightings.append(Sighting(item.term, item.false_alarm_probability, sources, result))
-    sightings.sort(key=lambda s: -max(s.assessment.gains.values()))
     everything = fits["white noise"]
+    if depth is not Depth.QUICK:
+        sightings = _with_errors(sightings, process, on_top.fit, white, everything)
+    sightings.sort(key=lambda s: -max(s.assessment.gains.values()))
     rest = _leftovers(series, scaled, white, everything)
     return Portrait(
         scaled,
@@ -134,8 +158,24 @@ def paint(
         tuple(sightings),
         tuple(white.orbits(everything)[: len(known)]),
         *rest,
-        comparisons=_comparisons(models, fits, on_top, len(known)),
+        comparisons=_comparisons(models, fits, on_top, kernel_evidence),
+        kernel_evidence=kernel_evidence,
     )
+
+
+def _with_errors(
+    sightings: Sequence[Sighting],
+    process: NoiseModel,
+    activity_fit: Fit,
+    white: NoiseModel,
+    white_fit: Fit,
+) -> list[Sighting]:
+    """Errors of the whole model, of the fit that each signal's orbit is taken from."""
+    errors: dict[OrbitTerm, OrbitErrors] = {}
+    for noise, result in ((white, white_fit), (process, activity_fit)):
+        found = laplace(noise, result).orbits
+        errors |= {t: e for t, e in zip(result.model.orbits, found, strict=True)}
+    return [replace(s, errors=errors.get(s.term)) for s in sightings]
 
 
 def _united(
@@ -195,7 +235,10 @@ def _leftovers(
 
 
 def _comparisons(
-    models: Sequence[NoiseModel], fits: dict[str, Fit], activity: Search, n_known: int
+    models: Sequence[NoiseModel],
+    fits: dict[str, Fit],
+    activity: Search,
+    kernel_evidence: dict[str, float],
 ) -> tuple[ModelComparison, ...]:
     """Activity alone, planets alone, and both."""
     white, process = models[0], models[-1]
@@ -208,20 +251,21 @@ def _comparisons(
     )
     out = []
     for name, noise, result in rows:
-        parameters = {}
+        parameters, evidence = {}, None
+        if result is activity.fit and kernel_evidence:
+            evidence = kernel_evidence[noise.kernel_name]
         if noise.kernel is not None:
             parameters = {
                 f"{key}{'_d' if key in ('period', 'decay') else ''}": float(np.exp(value))
-                for key, value in zip(
-                    noise.kernel.names, result.parameters, strict=False
-                )
+                for key, value in zip(noise.kernel.names, result.parameters, strict=False)
             }
+            parameters |= {f"log_evidence, {k}": v for k, v in kernel_evidence.items() if evidence}
         out.append(
             ModelComparison(
                 name,
                 len(result.model.orbits),
                 result.log_likelihood,
-                None,
+                evidence,
                 result.model.n_parameters + result.model.column_sd.size,
                 result.converged,
                 parameters,
