@@ -8,7 +8,7 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from screener.core import Array, Orbit, TimeSeries
+from screener.core import Array, IntArray, Orbit, TimeSeries
 from screener.models.exploration import same_period
 from screener.models.fitting import Fit
 from screener.models.joint import OrbitTerm
@@ -67,11 +67,11 @@ def gain_of(
     return max(full.profile - without.profile, 0.0), full, without
 
 
-def time_blocks(time: Array, fewest: int = 8) -> list[Array]:
+def time_blocks(time: Array, fewest: int = 8) -> list[IntArray]:
     """Rows of each observing season; a long or single season is cut, a short one joined."""
     edges = np.flatnonzero(np.diff(time) > 60) + 1
-    seasons = np.split(np.arange(time.size), edges)
-    blocks: list[Array] = []
+    seasons = np.split(np.arange(time.size, dtype=np.intp), edges)
+    blocks: list[IntArray] = []
     for season in seasons:
         if blocks and (season.size < fewest or blocks[-1].size < fewest):
             blocks[-1] = np.concatenate([blocks[-1], season])
@@ -81,7 +81,9 @@ def time_blocks(time: Array, fewest: int = 8) -> list[Array]:
     return [part for block in blocks for part in np.array_split(block, pieces) if part.size >= 2]
 
 
-def prediction_gain(with_orbit: Fit, without: Fit, blocks: Sequence[Array]) -> tuple[float, float]:
+def prediction_gain(
+    with_orbit: Fit, without: Fit, blocks: Sequence[IntArray]
+) -> tuple[float, float]:
     """Sum over left-out blocks of the log predictive score with less without the orbit.
 
     All other velocities and all indicators are given; linear terms, the orbit's amplitudes among
@@ -105,7 +107,9 @@ def prediction_gain(with_orbit: Fit, without: Fit, blocks: Sequence[Array]) -> t
     return float(score.sum()), error
 
 
-def _alias_or_same(frequency: Array, own: float, width: float) -> Array:
+def _alias_or_same(
+    frequency: Array, own: float, width: float
+) -> np.ndarray[tuple[int, ...], np.dtype[np.bool_]]:
     """Frequencies within ``width`` of the signal's own, its daily or yearly aliases."""
     near = np.abs(frequency - own) < width
     for shift in (1.0, 1 / _SIDEREAL_DAY, 2 / _SIDEREAL_DAY, 1 / _YEAR, 2 / _YEAR):

@@ -108,7 +108,7 @@ def prior_terms(model: JointModel, prior: HyperPrior) -> tuple[Array, Array, Arr
 
 
 def starting_point(
-    model: JointModel, prior: HyperPrior, signs: Sequence[float] = (), slope: float = 0.3
+    model: JointModel, prior: HyperPrior, signs: Array | None = None, slope: float = 0.3
 ) -> Array:
     """Prior means for the kernel, moderate amplitudes, jitter at half the errors.
 
@@ -119,8 +119,8 @@ def starting_point(
     out = mean.copy()
     if model.kernel is not None:
         out[model.slices["a"]] = 0.6
-        if len(signs):
-            out[model.slices["a"]] *= np.asarray(signs)
+        if signs is not None:
+            out[model.slices["a"]] *= signs
         out[model.slices["b"]] = slope
     return np.clip(out, lower, upper)
 
@@ -187,7 +187,3 @@ def _occam(result: Fit) -> float:
     mean, sd = solution.linear_mean[start:], model.column_sd[start:]
     _, log_det = np.linalg.slogdet(covariance)
     return float(np.log(sd).sum() - 0.5 * log_det + 0.5 * np.sum((mean / sd) ** 2))
-
-
-# the private name that this function had first
-_prior_terms = prior_terms

@@ -144,7 +144,7 @@ def minimum_mass(
         if abs(new - gm) <= 1e-15 * new:
             break
         gm = new
-    return gm / _GM_JUP
+    return float(gm / _GM_JUP)
 
 
 def semi_major_axis(period: float, stellar_mass: float, companion_mass: float = 0.0) -> float:

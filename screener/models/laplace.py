@@ -20,7 +20,7 @@ from dataclasses import dataclass, replace
 import numpy as np
 
 from screener.core import Array, Orbit
-from screener.models.fitting import Fit, _prior_terms
+from screener.models.fitting import Fit, prior_terms
 from screener.models.joint import JointModel
 from screener.models.noise import NoiseModel
 
@@ -83,7 +83,7 @@ def laplace(noise: NoiseModel, fit: Fit) -> LaplaceErrors:
         Where the likelihood cannot be computed beside the optimum.
     """
     model, x = fit.model, fit.parameters
-    _, sd, lower, upper = _prior_terms(model, noise.prior)
+    _, sd, lower, upper = prior_terms(model, noise.prior)
     wall = _AT_WALL * (1 + np.abs(x))
     free = np.flatnonzero((x - lower > wall) & (upper - x > wall))
     curvature, slopes = np.diag(1 / sd[free] ** 2), np.zeros((model.column_sd.size, free.size))

@@ -10,6 +10,7 @@ from __future__ import annotations
 import math
 from collections.abc import Callable, Sequence
 from dataclasses import dataclass, replace
+from typing import Any
 
 import numpy as np
 from joblib import Parallel, delayed
@@ -81,7 +82,7 @@ def draw_series(
     return replace(series, rv=rv, indicators=indicators, bands=(), photometry=None)
 
 
-def _redrawn(item: Indicator, value: Array, mask: np.ndarray) -> Indicator:  # type: ignore[type-arg]
+def _redrawn(item: Indicator, value: Array, mask: np.ndarray[Any, np.dtype[np.bool_]]) -> Indicator:
     return replace(item, value=np.where(mask, value, np.nan))
 
 

@@ -174,7 +174,7 @@ def _with_errors(
     errors: dict[OrbitTerm, OrbitErrors] = {}
     for noise, result in ((white, white_fit), (process, activity_fit)):
         found = laplace(noise, result).orbits
-        errors |= {t: e for t, e in zip(result.model.orbits, found, strict=True)}
+        errors |= dict(zip(result.model.orbits, found, strict=True))
     return [replace(s, errors=errors.get(s.term)) for s in sightings]
 
 

@@ -9,7 +9,7 @@ import numpy as np
 import pytest
 
 from screener.core import Array
-from screener.models.fitting import Fit, HyperPrior, _prior_terms, fit
+from screener.models.fitting import Fit, HyperPrior, prior_terms, fit
 from screener.models.joint import JointData
 from screener.models.kernels import KERNELS
 from screener.models.laplace import laplace, with_errors
@@ -67,7 +67,7 @@ def test_against_the_exact_posterior_of_few_irregular_velocities() -> None:
     noise = _noise(time, rv[None], 0.5)
     result = noise.fit([noise.term(30.0)])
     errors = laplace(noise, result)
-    mean, sd, _, _ = _prior_terms(result.model, PRIOR)
+    mean, sd, _, _ = prior_terms(result.model, PRIOR)
     spread = np.sqrt(np.diagonal(errors.covariance))
     grids = [result.parameters[i] + spread[i] * np.linspace(-5, 5, 41) for i in range(2)]
     log_weight, periods, k_mean, k_var = [], [], [], []
@@ -113,7 +113,7 @@ def test_curvature_against_second_differences_of_the_likelihood() -> None:
     noise, result = _active_star()
     errors = laplace(noise, result)
     assert errors.curved
-    _, sd, _, _ = _prior_terms(result.model, PRIOR)
+    _, sd, _, _ = prior_terms(result.model, PRIOR)
     x, n, h = result.parameters, result.parameters.size, 1e-3
     free = [i for i in range(n) if i not in errors.held]
     units = np.eye(n) * h
@@ -150,7 +150,7 @@ def test_unknown_noise_and_shape_widen_the_amplitude() -> None:
 
 def test_a_parameter_at_a_wall_is_held_and_says_so() -> None:
     noise, result = _active_star()
-    upper = _prior_terms(result.model, PRIOR)[3]
+    upper = prior_terms(result.model, PRIOR)[3]
     moved = result.parameters.copy()
     moved[0] = upper[0]
     errors = laplace(noise, replace(result, parameters=moved))
