@@ -7,8 +7,11 @@ verdict.
 from __future__ import annotations
 
 from collections.abc import Callable, Sequence
-from dataclasses import dataclass, replace
+from dataclasses import asdict, dataclass, replace
 from functools import partial
+from typing import Any
+
+import numpy as np
 
 from threadpoolctl import threadpool_limits
 
@@ -30,8 +33,10 @@ from screener.curves import products
 from screener.evidence import own_null, run_all, run_test
 from screener.evidence.case import Case
 from screener.models.kepler import orbit_velocity
+from screener.models.laplace import laplace
 from screener.models.nulls import DrawnSignal, NullDraws, injections, null_draws
 from screener.models.portrait import Portrait, Sighting, paint
+from screener.models.posterior import sample
 from screener.models.rotation import PeriodDensity, estimate_rotation
 from screener.rules import Graded, RuleSet, grade, load_rules
 from screener.system import describe_system, stability_findings
@@ -39,6 +44,7 @@ from screener.system import describe_system, stability_findings
 __all__ = ["Progress", "screen"]
 
 Progress = Callable[[str, float], None]
+_STEPS = 4000  # of each walker at the deep level
 _METHODS = ("baluev2008", "zechmeister2009", "rajpaul2015", "haywood2014", "delisle2020")
 
 
@@ -128,9 +134,14 @@ def _screen(
         observations.star, series, portrait, rotation, density, rules, depth, seed
     )
     tell("the system", 0.9)
+    posterior = None
+    if depth is Depth.DEEP:
+        tell("sampling the posterior", 0.92)
+        posterior = _sampled(portrait, seed)
     verdict = _verdict(
-        observations, portrait, rotation, judged, known, rules=rules, depth=depth, seed=seed
-    )
+        observations, portrait, rotation, judged, known, posterior,
+        rules=rules, depth=depth, seed=seed,
+    )  # fmt: skip
     shown = None
     if with_products:
         tell("curves for the figures", 0.97)
@@ -265,6 +276,7 @@ def _verdict(
     rotation: Rotation,
     judged: Sequence[_Judged],
     known: Sequence[Signal],
+    posterior: dict[str, Any] | None,
     *,
     rules: RuleSet,
     depth: Depth,
@@ -317,13 +329,38 @@ def _verdict(
         known_planets=tuple(known),
         models=portrait.comparisons,
         system=system,
-        cautions=_cautions(observations, portrait, rotation),
+        cautions=_cautions(observations, portrait, rotation, posterior),
         references=tuple(sorted(used | set(_METHODS))),
+        posterior=posterior,
     )
 
 
+def _sampled(portrait: Portrait, seed: int) -> dict[str, Any]:
+    """Posterior of the activity model with all its orbits: medians, 68 % intervals, convergence."""
+    result, noise = portrait.activity.fit, portrait.noise
+    errors = np.sqrt(np.diagonal(laplace(noise, result).covariance))
+    rng = np.random.default_rng(np.random.SeedSequence([seed, 15]))
+    found = sample(noise, result, errors, rng, n_steps=_STEPS)
+    orbits = [
+        {"period_d": asdict(p), "k_m_s": asdict(k)}
+        for p, k in zip(found.periods, found.semi_amplitudes, strict=True)
+    ]
+    return {
+        "orbits": orbits,
+        "rotation_period_d": asdict(found.rotation) if found.rotation else None,
+        "r_hat": found.r_hat,
+        "effective_sample_size": found.effective,
+        "autocorrelation_time": found.autocorrelation,
+        "acceptance": found.acceptance,
+        "converged": found.converged,
+    }
+
+
 def _cautions(
-    observations: Observations, portrait: Portrait, rotation: Rotation
+    observations: Observations,
+    portrait: Portrait,
+    rotation: Rotation,
+    posterior: dict[str, Any] | None,
 ) -> tuple[str, ...]:
     """What a reader must know before trusting a grade."""
     series = observations.series
@@ -340,4 +377,9 @@ def _cautions(
         out.append(f"The velocities span only {series.baseline:.0f} d.")
     if not all(m.converged for m in portrait.comparisons):
         out.append("A model fit stopped before it converged; its numbers are less certain.")
+    if posterior is not None and not posterior["converged"]:
+        out.append(
+            "The posterior samples have not converged "
+            f"(R-hat {posterior['r_hat']:.3f}); use the Laplace errors instead."
+        )
     return tuple(out)

@@ -387,6 +387,7 @@ class Verdict:
     system: Mapping[str, Any]
     cautions: tuple[str, ...]
     references: tuple[str, ...] = ()
+    posterior: Mapping[str, Any] | None = None  # deep level: samples' summary and convergence
 
 
 @dataclass(frozen=True, eq=False)

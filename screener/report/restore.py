@@ -108,6 +108,7 @@ def verdict_from_dict(content: Mapping[str, Any]) -> Verdict:
         system=content["system"],
         cautions=tuple(content["cautions"]),
         references=tuple(content["references"]),
+        posterior=content.get("posterior"),
     )
 
 

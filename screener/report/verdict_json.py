@@ -162,6 +162,7 @@ def verdict_to_dict(verdict: Verdict) -> dict[str, Any]:
         "notes": _notes(verdict),
         "star_known": _star(verdict),
         "references": verdict.references,
+        "posterior": verdict.posterior,
     }
     result: dict[str, Any] = plain(content)
     return result
