@@ -9,7 +9,8 @@ import numpy as np
 import pytest
 
 from screener.core import Array, NumericalError
-from screener.models.joint import JointData, JointModel, OrbitTerm, _orbit_columns
+from screener.models.joint import JointData, JointModel, OrbitTerm
+from screener.models.joint_data import orbit_columns
 from screener.models.kernels import KERNELS, Lags
 
 HYPER = {"period": math.log(20.0), "decay": math.log(40.0), "shape": math.log(0.5), "mix": 0.3}
@@ -88,7 +89,7 @@ def _dense(model: JointModel, parameters: Array) -> tuple[float, Array, Array]:
     design = data.columns.reshape(data.n_series * n, -1)
     for term, values in zip(model.orbits, model.orbit_parameters(parameters), strict=True):
         columns = np.zeros((data.n_series, n, 2))
-        columns[0] = _orbit_columns(term, values, data, gradient=False)[0]
+        columns[0] = orbit_columns(term, values, data, gradient=False)[0]
         design = np.concatenate([design, columns.reshape(-1, 2)], axis=1)
     covariance += (design * model.column_sd**2) @ design.T
     keep = data.mask.ravel()
