@@ -12,7 +12,6 @@ from functools import partial
 from typing import Any
 
 import numpy as np
-
 from threadpoolctl import threadpool_limits
 
 from screener import __version__

@@ -20,7 +20,15 @@ from screener.models.noise import NoiseModel
 from screener.search.false_alarm import analytic, effective_baseline, gain_with_free_scale
 from screener.search.periodogram import Peak, frequency_grid, peaks, power
 
-__all__ = ["Found", "Search", "same_period", "search_activity", "search_white", "usable"]
+__all__ = [
+    "Found",
+    "Search",
+    "known_terms",
+    "same_period",
+    "search_activity",
+    "search_white",
+    "usable",
+]
 
 MOST_SIGNALS = 6
 _ACCEPT = 0.01  # false-alarm probability below which a signal enters the list
@@ -103,8 +111,9 @@ def _shape(noise: NoiseModel, terms: list[OrbitTerm], result: Fit) -> tuple[list
     return terms, result
 
 
-def _known_terms(noise: NoiseModel, known: Sequence[KnownPlanet]) -> list[OrbitTerm]:
-    return [noise.term(planet.period, eccentric=False) for planet in known]
+def known_terms(noise: NoiseModel, known: Sequence[KnownPlanet]) -> list[OrbitTerm]:
+    """Orbits of the planets accepted already; eccentric where the sidecar says so."""
+    return [noise.term(p.period, eccentric=(p.eccentricity or 0.0) > 0.05) for p in known]
 
 
 def search_white(
@@ -144,7 +153,7 @@ def _search(
     bandwidth = float(grid[-1] - grid[0])
     span = effective_baseline(series.time, 1 / series.rv_err**2)
     white = noise.kernel is None
-    terms = _known_terms(noise, known) + [noise.term(p) for p in forced]
+    terms = known_terms(noise, known) + [noise.term(p) for p in forced]
     found = [Found(t, 0.0, "user") for t in terms[len(known) :]]
     result = noise.fit(terms, fresh=True)
     fits, gains = [result], []

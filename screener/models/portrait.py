@@ -14,6 +14,7 @@ from screener.models.dataset import Scaled, choose_indicators, scaled_data
 from screener.models.exploration import (
     Found,
     Search,
+    known_terms,
     same_period,
     search_activity,
     search_white,
@@ -121,27 +122,27 @@ def paint(
     hints = [f.term.period for f in in_white.found]
     on_top = search_activity(series, process, known, depth, hints)
     progress("comparing models", 0.45)
-    known_terms = [white.term(k.period) for k in known]
+    accepted = known_terms(white, known)
     kernel_evidence: dict[str, float] = {}
     if depth is not Depth.QUICK and series.n_obs <= _KERNELS_UP_TO:
-        inside = [*known_terms, *(f.term for f in on_top.found)]
+        inside = [*accepted, *(f.term for f in on_top.found)]
         choice = choose_kernel(scaled, prior, process, on_top.fit, inside)
         kernel_evidence = choice.log_evidence
         if choice.noise is not process:
             process = choice.noise
-            bare = process.fit(known_terms, near=[], fresh=True)
+            bare = process.fit(accepted, near=[], fresh=True)
             on_top = replace(on_top, fit=choice.fit, fits=(bare, *on_top.fits[1:]))
     found = _united(on_top.found, in_white.found, series.baseline)
     terms = [f.term for f, _ in found]
-    activity_terms = [*known_terms, *(f.term for f in on_top.found)]
+    activity_terms = [*accepted, *(f.term for f in on_top.found)]
     models = [white, white_noise(scaled, decorrelate=True)]
     models += [joint_process(scaled, prior, joint=False), process]
-    fits = _company(models, activity_terms, [*known_terms, *terms], in_white.fit, on_top.fit)
+    fits = _company(models, activity_terms, [*accepted, *terms], in_white.fit, on_top.fit)
     sightings = []
     for i, (item, sources) in enumerate(found):
         progress(f"weighing the signal at {item.term.period:.4g} d", 0.45 + 0.3 * i / len(found))
         result = assess(
-            series, item.term, activity_terms, [*known_terms, *terms], models, fits,
+            series, item.term, activity_terms, [*accepted, *terms], models, fits,
             in_white.frequency,
         )  # fmt: skip
         sightings.append(Sighting(item.term, item.false_alarm_probability, sources, result))
