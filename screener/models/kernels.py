@@ -11,9 +11,10 @@ from __future__ import annotations
 import math
 from collections.abc import Mapping
 from dataclasses import dataclass
-from typing import Protocol
+from typing import Any, Protocol
 
 import numpy as np
+from scipy.linalg import blas
 
 from screener.core import Array
 
@@ -54,13 +55,16 @@ class Blocks:
     gg: Array
     dg: Array | None
     dd: Array | None
-    cache: tuple[object, ...]
+    cache: tuple[Any, ...]
 
 
 class Kernel(Protocol):
     """What the likelihood asks of a kernel."""
 
-    names: tuple[str, ...]
+    @property
+    def names(self) -> tuple[str, ...]:
+        """The hyper-parameters, in order."""
+        ...
 
     def blocks(self, lags: Lags, log_parameters: Array, derivative: bool) -> Blocks:
         """Covariance blocks."""
@@ -86,85 +90,80 @@ class QuasiPeriodic:
     """exp(-lag^2 / (2 decay^2) - sin^2(pi lag / period) / (2 shape^2)).
 
     Haywood et al. (2014, MNRAS 443, 2517); derivative process after Rajpaul et al. (2015, MNRAS
-    452, 2269). sin^2 comes from cosines and sines of single times, so that one exponential per
-    pair remains.
+    452, 2269). Everything periodic in the lag is a product of matrices of two or three columns,
+    cosines and sines of single times, so that one exponential per pair remains.
     """
 
     names = ("period", "decay", "shape")
 
     def blocks(self, lags: Lags, log_parameters: Array, derivative: bool) -> Blocks:
-        period, decay, shape = np.exp(log_parameters)
+        period, decay, shape = np.exp(log_parameters).tolist()
         omega = 2 * math.pi / period
-        c1, s1 = np.cos(omega * lags.time), np.sin(omega * lags.time)
-        cos = np.outer(c1, c1)
-        cos += np.outer(s1, s1)
+        angle = omega * lags.time
+        c1, s1 = np.cos(angle), np.sin(angle)
+        ones = np.ones_like(c1)
         shape_term = 1 / (4 * shape**2)
+        # ln k = -lag^2 / (2 decay^2) + shape_term (cos - 1)
         k = lags.lag_squared * (-0.5 / decay**2)
-        k += shape_term * cos
-        k -= shape_term
+        left, right = np.stack([c1, s1, ones]), np.stack([c1, s1, -ones])
+        _add_product(k, shape_term, left, right)
         np.exp(k, out=k)
         if not derivative:
-            return Blocks(k, None, None, (cos, c1, s1))
-        sin = np.outer(s1, c1)
-        sin -= np.outer(c1, s1)
-        g1 = lags.lag * (-1 / decay**2)
-        g1 -= (omega * shape_term) * sin
-        g2 = cos * (-(omega**2) * shape_term)
-        g2 -= 1 / decay**2
+            return Blocks(k, None, None, (c1, s1))
         q2 = 1 / (1 / decay**2 + omega**2 * shape_term)
-        dg = k * g1
-        curvature = g1 * g1
-        curvature += g2
-        dd = curvature * k
-        dd *= -q2
-        kq = dg * math.sqrt(q2)
-        return Blocks(k, kq, dd, (cos, sin, g1, curvature, q2))
+        q = math.sqrt(q2)
+        # slope = q k' / k, bend = -q^2 k'' / k
+        slope = lags.lag * (-q / decay**2)
+        _add_product(slope, q * omega * shape_term, np.stack([s1, -c1]), np.stack([-c1, -s1]))
+        bend = slope * slope
+        right[2] = 1 / (decay**2 * omega**2 * shape_term)
+        _add_product(bend, q2 * omega**2 * shape_term, left, right, keep=-1.0)
+        return Blocks(k, k * slope, k * bend, (c1, s1, slope, bend, q2))
 
     def contract(
         self, lags: Lags, log_parameters: Array, blocks: Blocks, weights: tuple[Array, ...]
     ) -> Array:
-        period, decay, shape = np.exp(log_parameters)
+        period, decay, shape = np.exp(log_parameters).tolist()
         omega = 2 * math.pi / period
         shape_term = 1 / (4 * shape**2)
         k = blocks.gg
         if blocks.dg is None or blocks.dd is None:
-            cos, c1, s1 = blocks.cache
+            c1, s1 = blocks.cache
             f = weights[0] * k
-            sin = np.outer(s1, c1)  # type: ignore[arg-type]
-            sin -= np.outer(c1, s1)  # type: ignore[arg-type]
-            f_total = float(f.sum())
+            cos, _, _, lag_sin = _harmonic_sums(f, lags.time, c1, s1)
             return np.array(
                 [
-                    omega * shape_term * _total(f, lags.lag * sin),
+                    omega * shape_term * lag_sin,
                     _total(f, lags.lag_squared) / decay**2,
-                    2 * shape_term * (f_total - _total(f, cos)),  # type: ignore[arg-type]
+                    2 * shape_term * (float(f.sum()) - cos),
                 ]
             )
         w_gg, w_dg, w_dd = weights
-        cos, sin, g1, curvature, q2 = blocks.cache  # type: ignore[assignment]
-        q = math.sqrt(q2)  # type: ignore[arg-type]
-        # f multiplies d(ln k), x1 multiplies d(g1), x2 multiplies d(g2)
-        wd = w_dd * k
-        wd *= -q2  # type: ignore[operator]
+        c1, s1, slope, bend, q2 = blocks.cache
+        q = math.sqrt(q2)
+        # f multiplies d(ln k), x1 d(k' / k) and x2 d(k'' / k) less the square of the former
         x1 = w_dg * k
-        x1 *= q
-        t_dg, t_dd = _total(x1, g1), _total(wd, curvature)  # type: ignore[arg-type]
+        x2 = w_dd * k
+        t_dg, t_dd = _total(x1, slope), _total(x2, bend)
         f = w_gg * k
-        f += x1 * g1  # type: ignore[operator]
-        f += wd * curvature  # type: ignore[operator]
-        x1 += 2 * (wd * g1)  # type: ignore[operator]
-        x2 = wd
-        lag_sin = lags.lag * sin
-        f_sum, f_cos = float(f.sum()), _total(f, cos)  # type: ignore[arg-type]
-        x1_lag, x1_sin = _total(x1, lags.lag), _total(x1, sin)  # type: ignore[arg-type]
-        x2_sum, x2_cos = float(x2.sum()), _total(x2, cos)  # type: ignore[arg-type]
+        scratch = x1 * slope
+        f += scratch
+        f += np.multiply(x2, bend, out=scratch)
+        np.multiply(x2, slope, out=scratch)
+        scratch *= 2
+        x1 -= scratch
+        f_cos, _, _, f_lag_sin = _harmonic_sums(f, lags.time, c1, s1)
+        x1_cos_sums = _harmonic_sums(x1, lags.time, c1, s1)
+        x1_sin, x1_lag_cos = q * x1_cos_sums[1], q * x1_cos_sums[2]
+        x2_cos, _, _, x2_lag_sin = (-q2 * v for v in _harmonic_sums(x2, lags.time, c1, s1))
+        f_sum, x2_sum = float(f.sum()), -q2 * float(x2.sum())
+        x1_lag = q * _total(x1, lags.lag)
         # the scale q of the derivative depends on the parameters as well
         d_q = 0.5 * t_dg + t_dd
         rate = omega**2 * shape_term
         d_period = (
-            omega * shape_term * _total(f, lag_sin)
-            + omega * shape_term * (x1_sin + omega * _total(x1, lags.lag * cos))
-            + rate * (2 * x2_cos - omega * _total(x2, lag_sin))
+            omega * shape_term * (f_lag_sin + x1_sin + omega * x1_lag_cos)
+            + rate * (2 * x2_cos - omega * x2_lag_sin)
             + d_q * q2 * 2 * rate
         )
         d_decay = (_total(f, lags.lag_squared) + 2 * x1_lag + 2 * x2_sum + d_q * q2 * 2) / decay**2
@@ -175,6 +174,24 @@ class QuasiPeriodic:
             + d_q * q2 * 2 * rate
         )
         return np.array([d_period, d_decay, d_shape])
+
+
+def _add_product(out: Array, factor: float, left: Array, right: Array, keep: float = 1.0) -> None:
+    """out = keep out + factor left^T right in place; left, right (few, n); out C order."""
+    # BLAS sees the transpose of a C-ordered matrix
+    blas.dgemm(factor, right, left, keep, out.T, trans_a=1, overwrite_c=1)
+
+
+def _harmonic_sums(f: Array, time: Array, c1: Array, s1: Array) -> tuple[float, ...]:
+    """Sums over pairs of f times cos, sin, lag cos and lag sin of the pair's angle."""
+    tc, ts = time * c1, time * s1
+    fc, fs, ftc, fts = (f @ np.stack([c1, s1, tc, ts], axis=1)).T
+    return (
+        float(c1 @ fc + s1 @ fs),
+        float(s1 @ fc - c1 @ fs),
+        float(tc @ fc + ts @ fs - c1 @ ftc - s1 @ fts),
+        float(ts @ fc - tc @ fs - s1 @ ftc + c1 @ fts),
+    )
 
 
 class QuasiPeriodicCosine:
@@ -205,7 +222,7 @@ class QuasiPeriodicCosine:
         u = -lags.lag / decay**2
         first = envelope * (u * cos - omega * sin)
         curve = envelope * ((u * u - 1 / decay**2 - omega**2) * cos - 2 * omega * u * sin)
-        q2_main = float(main.cache[4])  # type: ignore[arg-type]
+        q2_main = float(main.cache[4])
         raw_dg = (1 - mix) * main.dg / math.sqrt(q2_main) + mix * first
         raw_dd = (1 - mix) * main.dd / q2_main - mix * curve
         rate = (1 - mix) / q2_main + mix * (1 / decay**2 + omega**2)
@@ -218,7 +235,7 @@ class QuasiPeriodicCosine:
         period, decay = np.exp(log_parameters[:2])
         omega = 4 * math.pi / period
         if blocks.dg is None:
-            main, cos, envelope, (c1, s1), mix = blocks.cache  # type: ignore[misc]
+            main, cos, envelope, (c1, s1), mix = blocks.cache
             sin = np.outer(s1, c1) - np.outer(c1, s1)
             gradient = np.zeros(4)
             gradient[:3] = (1 - mix) * self._main.contract(lags, log_parameters[:3], main, weights)
@@ -227,7 +244,7 @@ class QuasiPeriodicCosine:
             gradient[1] += mix * _total(w * cos, lags.lag_squared) / decay**2
             gradient[3] = mix * (1 - mix) * _total(weights[0], envelope * cos - main.gg)
             return gradient
-        main, cos, envelope, sin, mix, first, curve, raw_dg, raw_dd, rate, u = blocks.cache  # type: ignore[misc]
+        main, cos, envelope, sin, mix, first, curve, raw_dg, raw_dd, rate, u = blocks.cache
         w_gg, w_dg, w_dd = weights
         v_dg, v_dd = w_dg / math.sqrt(rate), w_dd / rate
         d_log_rate = -0.5 * _total(v_dg, raw_dg) - _total(v_dd, raw_dd)
