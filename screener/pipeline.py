@@ -99,6 +99,8 @@ def screen(
         Where no noise model can be fitted.
     """
     rules = rules or load_rules()
+    if period is not None:
+        period = float(f"{period:.10g}")  # as it is recorded, so that a rerun starts from the same
     # two numeric threads on two busy cores make small factorisations hundreds of times slower
     with threadpool_limits(1):
         return _screen(
@@ -141,6 +143,7 @@ def _screen(
         observations, portrait, rotation, judged, known, posterior,
         rules=rules, depth=depth, seed=seed,
     )  # fmt: skip
+    verdict = replace(verdict, asked_period=period, rules_file=rules.overlay)
     shown = None
     if with_products:
         tell("curves for the figures", 0.97)

@@ -25,7 +25,7 @@ TABLE_ENDINGS = frozenset(
 _PAPERS = ("readme", "license", "licence", "changes", "changelog", "notes", "citation")
 _PHOTOMETRY = ".phot.csv"
 
-# what the run itself writes into its folder
+# what the run and the decisions about it write into its folder
 RESERVED = frozenset(
     {
         "catalogue.sqlite",
@@ -35,6 +35,14 @@ RESERVED = frozenset(
         "index.html",
         "run.log",
         "workers.log",
+        # the record of decisions and what is exported from it
+        "ledger.jsonl",
+        "ledger.head.json",
+        "ledger.torn.jsonl",
+        "decisions.ecsv",
+        "decisions.csv",
+        "decisions.html",
+        "decisions.md",
     }
 )
 _MAX_LIST_BYTES = 50_000_000

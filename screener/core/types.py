@@ -388,6 +388,8 @@ class Verdict:
     cautions: tuple[str, ...]
     references: tuple[str, ...] = ()
     posterior: Mapping[str, Any] | None = None  # deep level: samples' summary and convergence
+    asked_period: float | None = None  # d, a period that the user wanted graded
+    rules_file: str | None = None  # what was laid over the default rules
 
 
 @dataclass(frozen=True, eq=False)

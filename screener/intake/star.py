@@ -160,14 +160,19 @@ def observe(source: Source, faults: FaultList) -> Observations:
         known_planets=tuple(p for _, p in sidecar.known_planets),
         notes=replace(notes, messages=tuple(messages)),
         record=InputRecord(
-            file=source.name,
+            file=_absolute(source.name),
             sha256=source.sha256,
-            sidecar=sidecar.path,
+            sidecar=_absolute(sidecar.path) if sidecar.path else None,
             sidecar_sha256=sidecar.sha256,
-            photometry=str(source.photometry) if light else None,
+            photometry=_absolute(source.photometry) if light and source.photometry else None,
             photometry_sha256=light[1] if light else None,
         ),
     )
+
+
+def _absolute(path: Path | str) -> str:
+    # the record outlives the folder that the command was given in
+    return str(Path(path).absolute())
 
 
 _NIGHTS_CURE = (

@@ -58,6 +58,7 @@ def verdict_from_dict(content: Mapping[str, Any]) -> Verdict:
         Where a key is missing or holds something else than we write.
     """
     record, notes, rotation = content["input"], content["notes"], content["rotation"]
+    options = content.get("options", {})  # early verdicts have none
     return Verdict(
         star=_star(content["star"], content["star_known"]),
         version=content["screener"],
@@ -109,6 +110,8 @@ def verdict_from_dict(content: Mapping[str, Any]) -> Verdict:
         cautions=tuple(content["cautions"]),
         references=tuple(content["references"]),
         posterior=content.get("posterior"),
+        asked_period=options.get("period_d"),
+        rules_file=options.get("rules_file"),
     )
 
 

@@ -392,9 +392,9 @@ def command_line(verdict: Verdict) -> str:
     parts = ["screener", "candidate", record.file]
     if record.sidecar:
         parts += ["--star", record.sidecar]
-    for item in verdict.signals:
-        if "user" in item.signal.found_by:
-            parts += ["--period", f"{item.signal.orbit.period:.6g}"]
-            break
+    if verdict.asked_period is not None:
+        parts += ["--period", repr(verdict.asked_period)]
+    if verdict.rules_file is not None:
+        parts += ["--rules", verdict.rules_file]
     parts += ["--depth", verdict.depth.value, "--seed", str(verdict.seed)]
     return shlex.join(parts)

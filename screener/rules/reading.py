@@ -50,7 +50,8 @@ def load_rules(
     InputFaults
         Every fault of the files, each with file, line, key and a cure.
     """
-    return _Loader(known_tests).load(path or DEFAULT_FILE, overlay, use_weights)
+    rules = _Loader(known_tests).load(path or DEFAULT_FILE, overlay, use_weights)
+    return rules if overlay is None else replace(rules, overlay=str(overlay.absolute()))
 
 
 class _Loader:

@@ -219,6 +219,7 @@ class RuleSet:
     classes: tuple[PriorClass, ...] = ()
     advice: tuple[Advice, ...] = ()
     terms: tuple[tuple[str, Condition], ...] = ()
+    overlay: str | None = None  # the file laid over the first, absolute; not part of the hash
 
     @property
     def label(self) -> str:

@@ -235,10 +235,7 @@ def test_names_of_strangers_stay_text(tmp_path: Path):
 def test_command_is_quoted_for_a_shell():
     verdict = sample().verdict
     record = replace(verdict.record, file="my stars; rm x.csv", sidecar=None)
-    forced = replace(
-        verdict.signals[0], signal=replace(verdict.signals[0].signal, found_by=("user",))
-    )
-    line = command_line(replace(verdict, record=record, signals=(forced,)))
+    line = command_line(replace(verdict, record=record, asked_period=37.42))
     assert line == (
         "screener candidate 'my stars; rm x.csv' --period 37.42 --depth standard --seed 7"
     )
