@@ -1,6 +1,7 @@
 """Published methods that the screener uses, by citation key, with BibTeX entries.
 
-Keys are the first author's surname and the year, lower case without blanks ("rajpaul2015").
+Keys are the first author's surname and the year, lower case without blanks ("rajpaul2015"). Names of
+stars are left out of titles ("...").
 """
 
 # ruff: noqa: E501
@@ -105,25 +106,27 @@ _ALL = (
     Reference("delisle2020", "Delisle, J.-B. and Hara, N. and Ségransan, D.", 2020, "Efficient modeling of correlated noise. I. Statistical significance of periodogram peaks", _AA, "635", "A83", "", "false-alarm probability in correlated noise"),
     Reference("vanderplas2018", "VanderPlas, J. T.", 2018, "Understanding the Lomb-Scargle periodogram", "The Astrophysical Journal Supplement Series", "236", "16", "10.3847/1538-4365/aab766", "frequency grids and window functions"),
     Reference("deeming1975", "Deeming, T. J.", 1975, "Fourier analysis with unequally-spaced data", "Astrophysics and Space Science", "36", "137", "", "spectral window"),
-    Reference("dawson2010", "Dawson, R. I. and Fabrycky, D. C.", 2010, "Radial velocity planets de-aliased: a new, short period for super-Earth 55 Cnc e", _APJ, "722", "937", "10.1088/0004-637X/722/1/937", "telling a period from its aliases"),
+    Reference("dawson2010", "Dawson, R. I. and Fabrycky, D. C.", 2010, "Radial velocity planets de-aliased ...", _APJ, "722", "937", "10.1088/0004-637X/722/1/937", "telling a period from its aliases"),
     # orbits
     Reference("markley1995", "Markley, F. L.", 1995, "Kepler equation solver", "Celestial Mechanics and Dynamical Astronomy", "63", "101", "10.1007/BF00691917", "solving Kepler's equation"),
     Reference("kipping2013", "Kipping, D. M.", 2013, "Parametrizing the exoplanet eccentricity distribution with the Beta distribution", f"{_MN}: Letters", "434", "L51", "10.1093/mnrasl/slt075", "prior of the eccentricity"),
+    Reference("feng2015", "Feng, Y. K. and Wright, J. T. and Nelson, B. and others", 2015, "The California Planet Survey IV ...", _APJ, "800", "22", "", "a drift as a lower limit on an outer companion"),
+    Reference("goodman2010", "Goodman, J. and Weare, J.", 2010, "Ensemble samplers with affine invariance", "Communications in Applied Mathematics and Computational Science", "5", "65", "10.2140/camcos.2010.5.65", "ensemble sampler"),
     Reference("angladaescude2010", "Anglada-Escudé, G. and López-Morales, M. and Chambers, J. E.", 2010, "How eccentric orbital solutions can hide planetary systems in 2:1 resonant orbits", _APJ, "709", "168", "10.1088/0004-637X/709/1/168", "one eccentric planet or two in 2:1"),
-    Reference("kurster2015", "Kürster, M. and Trifonov, T. and Reffert, S. and Kostogryz, N. M. and Rodler, F.", 2015, "Disentangling 2:1 resonant radial velocity orbits from eccentric ones and a case study for HD 27894", _AA, "577", "A103", "10.1051/0004-6361/201525872", "one eccentric planet or two in 2:1"),
+    Reference("kurster2015", "Kürster, M. and Trifonov, T. and Reffert, S. and Kostogryz, N. M. and Rodler, F.", 2015, "Disentangling 2:1 resonant radial velocity orbits from eccentric ones ...", _AA, "577", "A103", "10.1051/0004-6361/201525872", "one eccentric planet or two in 2:1"),
     Reference("gladman1993", "Gladman, B.", 1993, "Dynamics of systems of two close planets", "Icarus", "106", "247", "10.1006/icar.1993.1169", "Hill stability"),
     Reference("laskar2017", "Laskar, J. and Petit, A. C.", 2017, "AMD-stability and the classification of planetary systems", _AA, "605", "A72", "10.1051/0004-6361/201630022", "stability by angular momentum deficit"),
     Reference("winn2010", "Winn, J. N.", 2010, "Transits and occultations", "arXiv:1001.2010", purpose="transit probability and duration"),
     # the star
     Reference("aigrain2012", "Aigrain, S. and Pont, F. and Zucker, S.", 2012, "A simple method to estimate radial velocity variations due to stellar activity using photometry", _MN, "419", "3147", "10.1111/j.1365-2966.2011.19960.x", "velocities of spots from photometry"),
-    Reference("haywood2014", "Haywood, R. D. and others", 2014, "Planets and stellar activity: hide and seek in the CoRoT-7 system", _MN, "443", "2517", "10.1093/mnras/stu1320", "quasi-periodic Gaussian process of activity"),
+    Reference("haywood2014", "Haywood, R. D. and others", 2014, "Planets and stellar activity: hide and seek ...", _MN, "443", "2517", "10.1093/mnras/stu1320", "quasi-periodic Gaussian process of activity"),
     Reference("rajpaul2015", "Rajpaul, V. and Aigrain, S. and Osborne, M. A. and Reece, S. and Roberts, S.", 2015, "A Gaussian process framework for modelling stellar activity signals in radial velocity data", _MN, "452", "2269", "10.1093/mnras/stv1428", "one latent process and its derivative under velocities and indicators"),
     Reference("perger2021", "Perger, M. and others", 2021, "Auto-correlation functions of astrophysical processes, and their relation to Gaussian processes", _AA, "645", "A58", "10.1051/0004-6361/202039594", "quasi-periodic kernel with a half-period cosine"),
     Reference("noyes1984", "Noyes, R. W. and Hartmann, L. W. and Baliunas, S. L. and Duncan, D. K. and Vaughan, A. H.", 1984, "Rotation, convection, and magnetic activity in lower main-sequence stars", _APJ, "279", "763", "10.1086/161945", "rotation from chromospheric activity"),
     Reference("mamajek2008", "Mamajek, E. E. and Hillenbrand, L. A.", 2008, "Improved age estimation for solar-type dwarfs using activity-rotation diagnostics", _APJ, "687", "1264", "10.1086/591785", "rotation from chromospheric activity"),
     Reference("suarezmascareno2015", "Suárez Mascareño, A. and Rebolo, R. and González Hernández, J. I. and Esposito, M.", 2015, "Rotation periods of late-type dwarf stars from time series high-resolution spectroscopy of chromospheric indicators", _MN, "452", "2745", "10.1093/mnras/stv1441", "rotation of late-type dwarfs from activity"),
     Reference("saar1997", "Saar, S. H. and Donahue, R. A.", 1997, "Activity-related radial velocity variation in cool stars", _APJ, "485", "319", "10.1086/304392", "velocity amplitude of spots"),
-    Reference("queloz2001", "Queloz, D. and others", 2001, "No planet for HD 166435", _AA, "379", "279", "10.1051/0004-6361:20011308", "bisector against velocity"),
+    Reference("queloz2001", "Queloz, D. and others", 2001, "No planet for ...", _AA, "379", "279", "10.1051/0004-6361:20011308", "bisector against velocity"),
     Reference("boisse2011", "Boisse, I. and others", 2011, "Disentangling between stellar activity and planetary signals", _AA, "528", "A4", "10.1051/0004-6361/201014354", "spots at the rotation and its harmonics"),
     Reference("gregory2016", "Gregory, P. C.", 2016, "An apodized Kepler periodogram for separating planetary and stellar activity signals", _MN, "458", "2604", "10.1093/mnras/stw147", "apodised orbit"),
     Reference("hara2022", "Hara, N. C. and others", 2022, "Testing whether a signal is strictly periodic. Application to disentangling planets and stellar activity in radial velocities", _AA, "658", "A177", "", "apodised orbit"),
