@@ -26,6 +26,7 @@ from threadpoolctl import threadpool_limits
 from screener.core import Array, NumericalError
 from screener.models.fitting import HyperPrior, prior_terms
 from screener.models.joint import JointData, OrbitTerm
+from screener.models.kepler import orbit_columns
 from screener.models.kernels import KERNELS
 from screener.models.laplace import laplace
 from screener.models.noise import NoiseModel
@@ -99,9 +100,14 @@ def draw_star(rng: np.random.Generator, eccentric: bool) -> tuple[NoiseModel, Ar
     angle = rng.uniform(0, 2 * math.pi)
     along = np.array([math.cos(angle), math.sin(angle)])
     size = rng.uniform(5, 10) * math.sqrt(float(along @ covariance @ along))
-    from screener.models.joint import _orbit_columns
-
-    value[0] += _orbit_columns(term, truth[orbit], data, False)[0] @ (size * along)
+    if eccentric:
+        vector = truth[orbit][1:]
+        ecc, phase = float(np.hypot(*vector)), math.atan2(vector[1], vector[0])
+        ecc /= math.hypot(1, ecc)
+    else:
+        ecc, phase = 0.0, 0.0
+    time_peri = data.mid_time + true_period * phase / (2 * math.pi)
+    value[0] += orbit_columns(time, true_period, ecc, time_peri) @ (size * along)
     return replace(noise, data=replace(data, value=value)), np.append(truth, size), term
 
 
