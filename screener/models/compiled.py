@@ -40,13 +40,17 @@ _CAREFUL = {"contract", "nsz"}
 _SUMS = {"contract", "nsz", "reassoc", "arcp"}  # sums in any order, so that they are vectorised
 
 
+# The loops below write to one array each and run over slices from zero: else the compiler cannot
+# tell that arrays do not overlap, or indices wrap, and does not vectorise.
+
+
 @_compile(_CAREFUL)
-def _exponential(x: Array, out: Array, power: Array, bits: Array, count: int) -> None:
+def _exponential(x: Array, out: Array, power: Array, bits: Array) -> None:
     """exp of x <= 0, to 1e-15 relative; ``bits`` is ``power`` seen as integers.
 
     Written out because the compiler cannot vectorise calls of the library's exp.
     """
-    for j in range(count):
+    for j in range(x.size):
         v = max(x[j], -700.0)
         whole = np.floor(v * _LOG2_E + 0.5)
         v = (v - whole * _LN2_HIGH) - whole * _LN2_LOW
@@ -65,7 +69,7 @@ def _exponential(x: Array, out: Array, power: Array, bits: Array, count: int) ->
         p = p * v + 1.0
         out[j] = p * v + 1.0
         bits[j] = (np.int64(whole) + _BIAS) << _SHIFT
-    for j in range(count):
+    for j in range(x.size):
         out[j] *= power[j]
 
 
@@ -79,14 +83,16 @@ def _fill_one(
     bits = power.view(np.int64)
     rate = -0.5 / decay**2
     for i in range(n):
-        ti, ci, si, ri = time[i], c[i], s[i], r[i]
-        for j in range(i, n):
-            lag = ti - time[j]
-            exponent[j] = rate * lag * lag + shape_term * (ci * c[j] + si * s[j] - 1.0)
-        _exponential(exponent[i:], gg[i, i:], power[i:], bits[i:], n - i)
-        for j in range(i, n):
-            b[i, j] = gg[i, j] * ri * r[j]
-        b[i, i] += 1.0
+        ti, ci, si, ri = time[i], shape_term * c[i], shape_term * s[i], r[i]
+        tj, cj, sj, rj, x = time[i:], c[i:], s[i:], r[i:], exponent[i:]
+        k, row = gg[i, i:], b[i, i:]
+        for j in range(n - i):
+            lag = ti - tj[j]
+            x[j] = rate * lag * lag + (ci * cj[j] + si * sj[j] - shape_term)
+        _exponential(x, k, power[i:], bits[i:])
+        for j in range(n - i):
+            row[j] = k[j] * ri * rj[j]
+        row[0] += 1.0
 
 
 @_compile(_CAREFUL)
@@ -96,34 +102,43 @@ def _fill_two(
 ) -> None:  # fmt: skip
     """All of the kernel's blocks and the upper triangle of B."""
     n = time.size
-    exponent, power = np.empty(n), np.empty(n)
+    exponent, power, slope = np.empty(n), np.empty(n), np.empty(n)
     bits = power.view(np.int64)
     inverse = 1 / decay**2
     bump = omega * omega * shape_term
     q2 = 1 / (inverse + bump)
     q = math.sqrt(q2)
+    q_inverse, q_bump = q * inverse, q * omega * shape_term
     r11, r12, r22 = r[0], r[1], r[2]
     for i in range(n):
         ti, ci, si = time[i], c[i], s[i]
         r11i, r12i, r22i = r11[i], r12[i], r22[i]
+        k, kd, kdd = gg[i], dg[i], dd[i]
         for j in range(n):
             lag = ti - time[j]
             exponent[j] = -0.5 * inverse * lag * lag + shape_term * (ci * c[j] + si * s[j] - 1.0)
-        _exponential(exponent, gg[i], power, bits, n)
+        _exponential(exponent, k, power, bits)
         for j in range(n):
-            k = gg[i, j]
-            slope = -q * (inverse * (ti - time[j]) + omega * shape_term * (si * c[j] - ci * s[j]))
-            bend = q2 * (bump * (ci * c[j] + si * s[j]) + inverse) - slope * slope
-            dg[i, j] = k * slope
-            dd[i, j] = k * bend
-            b[i, n + j] = (r12i * dd[i, j] - r11i * dg[i, j]) * r22[j]
-        for j in range(i, n):
-            row_g = r11i * gg[i, j] + r12i * dg[i, j]
-            row_d = r12i * dd[i, j] - r11i * dg[i, j]
-            b[i, j] = row_g * r11[j] + row_d * r12[j]
-            b[n + i, n + j] = r22i * dd[i, j] * r22[j]
-        b[i, i] += 1.0
-        b[n + i, n + i] += 1.0
+            slope[j] = q_bump * (ci * s[j] - si * c[j]) - q_inverse * (ti - time[j])
+        for j in range(n):
+            bend = q2 * (bump * (ci * c[j] + si * s[j]) + inverse) - slope[j] * slope[j]
+            kdd[j] = k[j] * bend
+        for j in range(n):
+            kd[j] = k[j] * slope[j]
+        row = b[i, n:]
+        for j in range(n):
+            row[j] = (r12i * kdd[j] - r11i * kd[j]) * r22[j]
+        k, kd, kdd = gg[i, i:], dg[i, i:], dd[i, i:]
+        r11j, r12j, r22j = r11[i:], r12[i:], r22[i:]
+        row, last = b[i, i:], b[n + i, n + i :]
+        for j in range(n - i):
+            row[j] = (r11i * k[j] + r12i * kd[j]) * r11j[j]
+        for j in range(n - i):
+            row[j] += (r12i * kdd[j] - r11i * kd[j]) * r12j[j]
+        for j in range(n - i):
+            last[j] = r22i * kdd[j] * r22j[j]
+        row[0] += 1.0
+        last[0] += 1.0
 
 
 @_compile(_SUMS)
@@ -133,68 +148,100 @@ def _back_one(
     """Sums of f, f lag^2, f cos, f lag sin over the upper triangle; the gradient in r."""
     n = time.size
     total = total_lag2 = total_cos = total_lag_sin = 0.0
+    scratch = np.empty(n)
     for i in range(n):
         ti, ci, si, ri = time[i], c[i], s[i], r[i]
-        row = 0.0
-        for j in range(i, n):
-            g = weights[i, j] * gg[i, j]
-            by_r[j] += g * ri
-            y = g * r[j]
+        tj, cj, sj, rj = time[i:], c[i:], s[i:], r[i:]
+        w, k, g, on = weights[i, i:], gg[i, i:], scratch[i:], by_r[i:]
+        row = row_lag2 = row_cos = row_lag_sin = 0.0
+        for j in range(n - i):
+            g[j] = w[j] * k[j]
+        for j in range(n - i):
+            on[j] += g[j] * ri
+        for j in range(n - i):
+            y = g[j] * rj[j]
+            lag = ti - tj[j]
             row += y
-            f = y * ri
-            lag = ti - time[j]
-            total_lag2 += f * lag * lag
-            total_cos += f * (ci * c[j] + si * s[j])
-            total_lag_sin += f * lag * (si * c[j] - ci * s[j])
+            row_lag2 += y * lag * lag
+            row_cos += y * (ci * cj[j] + si * sj[j])
+            row_lag_sin += y * lag * (si * cj[j] - ci * sj[j])
         by_r[i] += row
         total += row * ri
+        total_lag2 += row_lag2 * ri
+        total_cos += row_cos * ri
+        total_lag_sin += row_lag_sin * ri
     return total, total_lag2, total_cos, total_lag_sin
 
 
 @_compile(_SUMS)
-def _back_two(
+def _back_to_r(r: Array, gg: Array, dg: Array, dd: Array, weights: Array, by_r: Array) -> None:
+    """The gradient in R; see ``NumpyEngine.backward``."""
+    n = r.shape[1]
+    r11, r12, r22 = r[0], r[1], r[2]
+    on00, on01, on10, on11 = by_r[0, 0], by_r[0, 1], by_r[1, 0], by_r[1, 1]
+    for i in range(n):
+        r11i, r12i, r22i = r11[i], r12[i], r22[i]
+        k, kd, kdd = gg[i], dg[i], dd[i]
+        u00, u01, u11 = weights[i, :n], weights[i, n:], weights[n + i, n:]
+        for j in range(n):
+            on00[j] += u00[j] * (r11i * k[j] + r12i * kd[j])
+        for j in range(n):
+            on01[j] += u00[j] * (r12i * kdd[j] - r11i * kd[j])
+        for j in range(n):
+            on10[j] += u01[j] * (r11i * k[j] + r12i * kd[j]) + u11[j] * r22i * kd[j]
+        for j in range(n):
+            on11[j] += u01[j] * (r12i * kdd[j] - r11i * kd[j]) + u11[j] * r22i * kdd[j]
+        row00 = row01 = row10 = row11 = 0.0
+        for j in range(n):
+            y00 = u00[j] * r11[j]
+            y01 = u00[j] * r12[j] + u01[j] * r22[j]
+            y11 = u11[j] * r22[j]
+            row00 += y00 * k[j] - y01 * kd[j]
+            row01 += y00 * kd[j] + y01 * kdd[j]
+            row10 -= y11 * kd[j]
+            row11 += y11 * kdd[j]
+        on00[i] += row00
+        on01[i] += row01
+        on10[i] += row10
+        on11[i] += row11
+
+
+@_compile(_SUMS)
+def _back_to_kernel(
     time: Array, c: Array, s: Array, decay: float, shape_term: float, omega: float, r: Array,
-    gg: Array, dg: Array, dd: Array, weights: Array, by_r: Array,
+    gg: Array, dg: Array, dd: Array, weights: Array,
 ) -> tuple[float, float, float]:  # fmt: skip
-    """Gradients in the kernel's log parameters and in R; see ``NumpyEngine.backward``."""
+    """Gradient in the kernel's log parameters; see ``QuasiPeriodic.contract``."""
     n = time.size
     inverse = 1 / decay**2
     rate = omega * omega * shape_term
     q2 = 1 / (inverse + rate)
     q = math.sqrt(q2)
+    q_inverse, q_bump = q * inverse, q * omega * shape_term
     r11, r12, r22 = r[0], r[1], r[2]
-    on00, on01, on10, on11 = by_r[0, 0], by_r[0, 1], by_r[1, 0], by_r[1, 1]
     f_sum = f_lag2 = f_cos = f_lag_sin = 0.0
     x1_lag = x1_sin = x1_lag_cos = 0.0
     x2_sum = x2_cos = x2_lag_sin = d_q = 0.0
     for i in range(n):
         ti, ci, si = time[i], c[i], s[i]
         r11i, r12i, r22i = r11[i], r12[i], r22[i]
-        row00 = row01 = row10 = row11 = 0.0
+        gg_i, dg_i, dd_i = gg[i], dg[i], dd[i]
+        u00, u01, u11 = weights[i, :n], weights[i, n:], weights[n + i, n:]
         for j in range(n):
-            u00, u01, u11 = weights[i, j], weights[i, n + j], weights[n + i, n + j]
-            k, kd, kdd = gg[i, j], dg[i, j], dd[i, j]
-            on00[j] += u00 * (r11i * k + r12i * kd)
-            on01[j] += u00 * (r12i * kdd - r11i * kd)
-            on10[j] += u01 * (r11i * k + r12i * kd) + u11 * r22i * kd
-            on11[j] += u01 * (r12i * kdd - r11i * kd) + u11 * r22i * kdd
-            y00 = u00 * r11[j]
-            y01 = u00 * r12[j] + u01 * r22[j]
-            y11 = u11 * r22[j]
-            row00 += y00 * k - y01 * kd
-            row01 += y00 * kd + y01 * kdd
-            row10 -= y11 * kd
-            row11 += y11 * kdd
+            k, kd, kdd = gg_i[j], dg_i[j], dd_i[j]
+            y00 = u00[j] * r11[j]
+            y01 = u00[j] * r12[j] + u01[j] * r22[j]
             w_dg = r12i * y00 - r11i * y01
-            w_dd = r12i * y01 + r22i * y11
+            w_dd = r12i * y01 + r22i * u11[j] * r22[j]
             lag = ti - time[j]
             cos = ci * c[j] + si * s[j]
             sin = si * c[j] - ci * s[j]
-            slope = -q * (inverse * lag + omega * shape_term * sin)
-            f = r11i * y00 * k + w_dg * kd + w_dd * kdd
+            slope = -q_inverse * lag - q_bump * sin
+            from_dg, from_dd = w_dg * kd, w_dd * kdd
+            f = r11i * y00 * k + from_dg + from_dd
             x2 = w_dd * k
             x1 = w_dg * k - 2.0 * x2 * slope
-            d_q += 0.5 * w_dg * kd + w_dd * kdd
+            d_q += 0.5 * from_dg + from_dd
             f_sum += f
             f_lag2 += f * lag * lag
             f_cos += f * cos
@@ -205,10 +252,6 @@ def _back_two(
             x2_sum += x2
             x2_cos += x2 * cos
             x2_lag_sin += x2 * lag * sin
-        on00[i] += row00
-        on01[i] += row01
-        on10[i] += row10
-        on11[i] += row11
     common = 2.0 * rate * q2 * (d_q - x2_cos)
     d_period = (
         omega * shape_term * (f_lag_sin + q * (x1_sin + omega * x1_lag_cos))
@@ -255,10 +298,9 @@ class CompiledQuasiPeriodic:
             )
             by_kernel = [omega * lag_sin, lag2 / decay**2 / shape_term, 2 * (total - cos)]
             return shape_term * np.array(by_kernel), by_r
-        by_kernel = _back_two(
-            lags.time, c, s, decay, shape_term, omega, r, blocks.gg, blocks.dg, blocks.dd,
-            weights, by_r,
-        )  # fmt: skip
+        three = (blocks.gg, blocks.dg, blocks.dd)
+        _back_to_r(r, *three, weights, by_r)
+        by_kernel = _back_to_kernel(lags.time, c, s, decay, shape_term, omega, r, *three, weights)
         return np.array(by_kernel), by_r
 
     def apply(self, blocks: Blocks, r: Array, columns: Array) -> tuple[Array, ...]:
