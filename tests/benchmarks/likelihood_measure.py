@@ -10,6 +10,7 @@ import time
 import warnings
 from collections.abc import Callable, Sequence
 from dataclasses import replace
+from pathlib import Path
 from typing import Any
 
 import numpy as np
@@ -79,8 +80,7 @@ def _single(n: int) -> dict[str, float]:
         return lambda: one.value_and_gradient(parameters)
 
     taken = _in_turns([lambda: call(point), *map(run, paths.values())], _rounds(n))
-    out = {name: _ratio(taken[0], t) for name, t in zip(paths, taken[1:], strict=True)}
-    return out
+    return {name: _ratio(taken[0], t) for name, t in zip(paths, taken[1:], strict=True)}
 
 
 def _joint(n: int) -> dict[str, float]:
@@ -204,7 +204,7 @@ def _long() -> tuple[float | None, dict[int, float]]:
 def _hardware() -> str:
     model = platform.processor() or platform.machine()
     try:
-        with open("/proc/cpuinfo", encoding="utf-8") as lines:
+        with Path("/proc/cpuinfo").open(encoding="utf-8") as lines:
             model = next(line.split(":")[1].strip() for line in lines if "model name" in line)
     except (OSError, StopIteration):
         pass
