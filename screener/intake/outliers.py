@@ -1,10 +1,10 @@
 """Marking of outliers: cautious with velocities, because planets make far values too.
 
-A velocity is marked only if it stands alone: it lies far from its neighbours in time *and* outside
-the range in which nearly all velocities of its instrument lie, no other exposure of the same
-night and no neighbour on the flank agrees with it, and no other velocity is nearly as far. Hot
-Jupiters fail the second test, passages through periastron of eccentric orbits the later ones.
-What is far but not alone is kept and said.
+A velocity is marked only if it stands alone: it lies far from its neighbours in time *and* far from
+the range in which nearly all velocities of its instrument lie, no other exposure of the same night
+and no neighbour on the flank agrees with it, and a wide empty stretch parts it (with at most a
+few others) from the rest. Hot Jupiters fail the second test; passages through periastron of
+eccentric orbits have flanks and fill the stretch. What is far but not alone is kept and said.
 """
 
 from __future__ import annotations
@@ -19,6 +19,8 @@ __all__ = ["FAR", "far_indicator_values", "isolated_velocities", "odd_exposures"
 
 FAR = 8.0  # robust scatters
 _GLOBAL = 5.0
+_ALONE = 3.5  # robust scatters about the neighbours, for a velocity beyond an empty stretch
+_EMPTY = 1.8  # the nearest of the glitches is this much further out than the last of the rest
 _FLANK_D = 10.0
 _MIN_POINTS = 12
 
@@ -66,33 +68,38 @@ def isolated_velocities(
             continue
         d, far = _deviations(rv[mine], rv_err[mine])
         deviation[mine] = d
-        alone = far & ~_supported(time[mine], d) & ~_alike(d, far)
-        if np.count_nonzero(alone) > max(2, 0.02 * mine.size):
-            alone[:] = False
+        most = max(3, int(0.05 * mine.size))
+        apart = _beyond_gap(rv[mine], robust_scatter(rv[mine]), most) & (np.abs(d) > _ALONE)
+        alone = apart & ~_supported(time[mine], d)
         marked[mine[alone]] = True
-        kept += int(np.count_nonzero(far & ~alone))
+        kept += int(np.count_nonzero((far | apart) & ~alone))
     return marked, deviation, kept
 
 
 def _supported(time: Array, deviation: Array) -> NDArray[np.bool_]:
     """Whether a neighbour within ten days deviates to the same side by three scatters or more."""
     out = np.zeros(time.size, dtype=bool)
-    for i in np.flatnonzero(np.abs(deviation) > FAR):
+    for i in np.flatnonzero(np.abs(deviation) > _ALONE):
         near = np.abs(time - time[i]) <= _FLANK_D
         near[i] = False
         out[i] = bool(np.any(near & (deviation * np.sign(deviation[i]) > 3.0)))
     return out
 
 
-def _alike(deviation: Array, far: NDArray[np.bool_]) -> NDArray[np.bool_]:
-    """Whether another one deviates to the same side by at least 40 % as much.
+def _beyond_gap(value: Array, spread: float, most: int) -> NDArray[np.bool_]:
+    """The at most ``most`` values that an empty stretch parts from the rest.
 
-    A glitch stands off from the rest; the largest of a tail, as eccentric orbits make it, does not.
+    Distances are from the median. A glitch stands off from the rest; the largest of a tail, as
+    eccentric orbits make it, does not.
     """
-    out = np.zeros(deviation.size, dtype=bool)
-    for i in np.flatnonzero(far):
-        along = deviation * np.sign(deviation[i])
-        out[i] = np.count_nonzero(along >= 0.4 * along[i]) > 1
+    distance = np.abs(value - np.median(value))
+    order = np.argsort(distance)[::-1]
+    out = np.zeros(value.size, dtype=bool)
+    for count in range(min(most, value.size - 1), 0, -1):
+        inner = max(distance[order[count]], 2.0 * spread)
+        if distance[order[count - 1]] > max(_EMPTY * inner, _GLOBAL * spread):
+            out[order[:count]] = True
+            break
     return out
 
 

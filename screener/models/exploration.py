@@ -34,7 +34,9 @@ MOST_SIGNALS = 6
 _ACCEPT = 0.01  # false-alarm probability below which a signal enters the list
 _ECCENTRIC_GAIN = 5.0  # what two more parameters must bring
 _STRONG = 40.0  # gain above which an orbit's shape can be told
-_NEAR_BEST = 6.0  # aliases this close to the highest peak are tried as well
+_NEAR_BEST = 6.0  # peaks this close to the highest are tried as well
+_RIVAL = 2.0  # an alias within this of the chosen period is fitted in full
+_ALIAS_REACH = 9.0  # daily aliases this close, since other signals distort the heights
 
 
 @dataclass(frozen=True)
@@ -76,6 +78,36 @@ def usable(frequency: Array, baseline: float) -> np.ndarray[tuple[int, ...], np.
     return keep
 
 
+def log_occurrence(period: float) -> float:
+    """Natural logarithm of how common planets of that period are, against those of some days.
+
+    Occurrence for each factor in period falls steeply below some ten days, while daily sampling
+    throws the power of slower signals there (common practice, no source for the exact shape).
+    """
+    return min(0.0, 1.5 * math.log(period / 8.0))
+
+
+def daily_aliases(frequency: float) -> list[float]:
+    """Frequencies that nightly sampling confuses with this one, positive, itself not among them."""
+    day = 1.0027379
+    shifted = (frequency + day, frequency - day, frequency + 2 * day, frequency - 2 * day)
+    return [abs(f) for f in shifted]
+
+
+def _with_aliases(grid: Array, gain: Array, tops: Sequence[Peak], baseline: float) -> list[Peak]:
+    """The highest peak's daily aliases where they rise nearly as high."""
+    out = list(tops)
+    for alias in daily_aliases(tops[0].frequency):
+        near = np.flatnonzero(np.abs(grid - alias) < 1 / baseline)
+        if near.size == 0:
+            continue
+        best = near[np.argmax(gain[near])]
+        known = any(abs(grid[best] - p.frequency) < 1 / baseline for p in out)
+        if not known and gain[best] > tops[0].power - _ALIAS_REACH:
+            out.append(Peak(float(grid[best]), float(gain[best])))
+    return out
+
+
 def _best_peak(
     noise: NoiseModel, result: Fit, terms: Sequence[OrbitTerm], candidates: Sequence[Peak]
 ) -> tuple[OrbitTerm, Fit]:
@@ -84,7 +116,7 @@ def _best_peak(
     for peak in candidates:
         term = noise.term(1 / peak.frequency)
         glance = noise.glance([*terms, term], result)
-        trials.append((glance.objective, term, glance))
+        trials.append((glance.objective + log_occurrence(term.period), term, glance))
     _, term, start = max(trials, key=lambda item: item[0])
     return term, noise.fit([*terms, term], near=[start])
 
@@ -170,6 +202,7 @@ def _search(
         if not tops:
             break
         tops = [p for p in tops if p.power > tops[0].power - _NEAR_BEST]
+        tops = _with_aliases(grid, gain, tops, series.baseline)
         tops += _hinted(grid, gain, hints, tops, terms, series.baseline)
         term, better = _best_peak(noise, result, terms, tops)
         # the refit gain counts where it is smaller: peaks on a poor optimum look higher
@@ -186,7 +219,44 @@ def _search(
             for t, f in zip(terms[len(known) :], found, strict=True)
         ]
         fits.append(result)
+    if found and found[0].found_by == name:
+        found, result = _settle_aliases(series, noise, found, result, len(known))
+        fits[-1] = result
     return Search(tuple(found), result, tuple(fits), grid, tuple(gains), bandwidth, span)
+
+
+def _settle_aliases(
+    series: TimeSeries, noise: NoiseModel, found: list[Found], result: Fit, n_known: int
+) -> tuple[list[Found], Fit]:
+    """Ask again, with all signals in the model, which member of its alias family each one is.
+
+    A signal taken out early was chosen while the later ones still distorted the heights.
+    """
+    for i in range(len(found)):
+        terms = list(result.model.orbits)
+        term = terms[n_known + i]
+        rest = [t for t in terms if t is not term]
+        without = noise.known(rest) or noise.glance(rest, result)
+        aliases = np.array(daily_aliases(1 / term.period))
+        step = 1 / (6 * series.baseline)
+        grid = (np.array([1 / term.period, *aliases])[:, None] + step * np.arange(-6, 7)).ravel()
+        fine = (grid > 0.4 / series.baseline) & usable(grid, series.baseline)
+        fine &= _apart(grid, rest, series.baseline)
+        gain = np.where(fine, power(series.time, noise.precision(without), np.abs(grid)), 0.0)
+        heights = gain.reshape(-1, 13).max(axis=1)
+        where = grid.reshape(-1, 13)[np.arange(heights.size), gain.reshape(-1, 13).argmax(axis=1)]
+        heights += np.array([log_occurrence(1 / f) for f in np.maximum(where, 1e-9)])
+        rival = 1 + int(np.argmax(heights[1:]))
+        if heights[rival] < heights[0] - _RIVAL:
+            continue
+        other = noise.term(float(1 / where[rival]))
+        trial_terms = [other if t is term else t for t in terms]
+        trial = noise.fit(trial_terms, near=[noise.glance(trial_terms, result)])
+        better = trial.objective + log_occurrence(other.period)
+        if better > result.objective + log_occurrence(term.period):
+            result = trial
+            found[i] = Found(other, found[i].false_alarm_probability, found[i].found_by)
+    return found, result
 
 
 def _apart(
