@@ -18,7 +18,13 @@ from screener.models.fitting import Fit
 from screener.models.joint import OrbitTerm
 from screener.models.noise import NoiseModel
 from screener.search.false_alarm import analytic, effective_baseline, gain_with_free_scale
-from screener.search.periodogram import Peak, frequency_grid, peaks, power
+from screener.search.periodogram import (
+    SHORTEST_PERIOD,
+    Peak,
+    frequency_grid,
+    peaks,
+    power,
+)
 
 __all__ = [
     "Found",
@@ -240,7 +246,8 @@ def _settle_aliases(
         aliases = np.array(daily_aliases(1 / term.period))
         step = 1 / (6 * series.baseline)
         grid = (np.array([1 / term.period, *aliases])[:, None] + step * np.arange(-6, 7)).ravel()
-        fine = (grid > 0.4 / series.baseline) & usable(grid, series.baseline)
+        fine = (grid > 0.4 / series.baseline) & (grid < 1 / SHORTEST_PERIOD)
+        fine &= usable(grid, series.baseline)
         fine &= _apart(grid, rest, series.baseline)
         gain = np.where(fine, power(series.time, noise.precision(without), np.abs(grid)), 0.0)
         heights = gain.reshape(-1, 13).max(axis=1)
