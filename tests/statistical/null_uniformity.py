@@ -210,7 +210,7 @@ def _bands_effect(seed: int) -> Case:
 
 def _plausible(seed: int) -> Case:
     """An amplitude drawn from what the star can do."""
-    rng = np.random.default_rng([seed, 21])
+    rng = np.random.default_rng([21, seed])
     case = make_case(seed, Recipe(n=60))
     level = float(rng.uniform(-5.1, -4.2))
     size = amplitude_from_level(level, False) * math.exp(0.7 * rng.standard_normal())

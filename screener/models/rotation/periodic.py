@@ -7,7 +7,12 @@ from dataclasses import dataclass
 import numpy as np
 
 from screener.core import Array, TimeSeries
-from screener.models.rotation.channels import Channels, indicator_channels, photometry_channel
+from screener.models.rotation.channels import (
+    ABSENT,
+    Channels,
+    indicator_channels,
+    photometry_channel,
+)
 from screener.models.rotation.density import PERIOD_GRID, PeriodDensity
 from screener.models.rotation.quasiperiodic import (
     lag_autocorrelation,
@@ -18,8 +23,8 @@ from screener.models.rotation.quasiperiodic import (
 __all__ = ["PeriodicSource", "autocorrelation_period", "from_indicators", "from_photometry"]
 
 _SHORTEST, _LONGEST = 1.2, 180.0  # d; nightly sampling ends the one, seasons the other
-# Channels share one realisation of the spots, so their likelihoods count a little less; and a
-# channel may show no rotation at all. Both tuned on simulated stars.
+# The noise is not quite of the assumed kind, so likelihoods count a little less; and a channel may
+# show no rotation at all. Both tuned on simulated stars.
 _TEMPER = 0.7
 _CHANNEL_MUTE = 0.3
 _AMBIGUOUS = 0.08
@@ -47,10 +52,30 @@ def _peaks(values: Array, n: int) -> list[int]:
     return [int(k) for k in inner[np.argsort(values[inner])[::-1][:n]]]
 
 
-def _pooled(likelihood: Array) -> Array:
+def _independent(channels: Channels) -> float:
+    """Effective number of independent channels over their number, between 1/n and 1.
+
+    Channels see the same spots: with correlations r of the cleaned values, n^2 / sum(r^2) of n
+    channels are worth as much as independent ones.
+    """
+    known = channels.variance < ABSENT
+    value = np.where(known, channels.value, 0.0)
+    n = len(channels.names)
+    r = np.ones((n, n))
+    for i in range(n):
+        for j in range(i):
+            both = known[i] & known[j]
+            size = float(np.sum(value[i, both] ** 2) * np.sum(value[j, both] ** 2))
+            cross = float(np.sum(value[i, both] * value[j, both]))
+            r[i, j] = r[j, i] = cross / np.sqrt(size) if size > 0.0 else 0.0
+    return float(n / np.sum(r**2))
+
+
+def _pooled(likelihood: Array, independent: float) -> Array:
     """Channels together: each says something, or with some chance nothing."""
     spoken = np.log(1.0 - _CHANNEL_MUTE) + _TEMPER * likelihood
-    return np.asarray(np.sum(np.logaddexp(spoken, np.log(_CHANNEL_MUTE)), axis=1))
+    total = np.sum(np.logaddexp(spoken, np.log(_CHANNEL_MUTE)), axis=1)
+    return np.asarray(independent * total)
 
 
 def autocorrelation_period(channels: Channels) -> float | None:
@@ -83,11 +108,11 @@ def _periodic(channels: Channels, name: str, block_size: int, most_blocks: int) 
     # periods beyond the span are tested as well: the data hardly tell them apart from a slow
     # drift, and the density must say so
     coarse: Array = np.geomspace(_SHORTEST, _LONGEST, 72)
-    total = _pooled(
-        period_likelihood(
-            channels, coarse, fine=False, block_size=block_size, most_blocks=most_blocks
-        )
+    independent = _independent(channels)
+    rough = period_likelihood(
+        channels, coarse, fine=False, block_size=block_size, most_blocks=most_blocks
     )
+    total = _pooled(rough, independent)
     frequency = np.arange(1.0 / _LONGEST, 1.0 / _SHORTEST, 1.0 / 1500.0)
     tops = [float(coarse[k]) for k in _peaks(total, 4)] + [float(coarse[int(np.argmax(total))])]
     for coherence in (40.0, 150.0):
@@ -100,7 +125,7 @@ def _periodic(channels: Channels, name: str, block_size: int, most_blocks: int) 
     # a coarse point that has fine ones beside it gives way to them
     lonely = np.min(np.abs(np.log(coarse[:, None] / fine[None, :])), axis=1) > 0.02
     periods = np.append(coarse[lonely], fine)
-    values = np.append(total[lonely], _pooled(second))
+    values = np.append(total[lonely], _pooled(second, independent))
     order = np.argsort(periods)
     periods, values = periods[order], values[order]
     log_density = np.interp(
@@ -126,7 +151,7 @@ def _periodic(channels: Channels, name: str, block_size: int, most_blocks: int) 
 def from_indicators(series: TimeSeries) -> PeriodicSource | None:
     """All indicators jointly; None with fewer than 20 nights of each."""
     channels = indicator_channels(series)
-    return None if channels is None else _periodic(channels, "indicators", 60, 5)
+    return None if channels is None else _periodic(channels, "indicators", 80, 4)
 
 
 def from_photometry(series: TimeSeries) -> PeriodicSource | None:

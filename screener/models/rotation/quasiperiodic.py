@@ -30,6 +30,8 @@ _FINE_SHAPES = (
 _COARSE_SHARES = (0.3, 0.9)
 _FINE_SHARES = (0.3, 0.8, 0.97)
 _LONGEST_DECAY = 300.0  # d
+# variance of the unknown mean of a block: zero points and trend have been taken off already
+_MEAN = 0.05
 _CORNER = 1e8
 
 
@@ -140,7 +142,7 @@ def period_likelihood(
     excess = channels.signal[None, :, None]
 
     def log_likelihood(kernel: Array, share: float) -> Array:
-        process = share * kernel + 0.2 * pair
+        process = share * kernel + _MEAN * pair
         matrix[:, :, :width, :width] = excess[..., None] * process[:, None]
         matrix[:, :, diagonal, diagonal] += variance + (1.0 - share) * excess
         matrix[:, :, width, :width] = value
