@@ -9,7 +9,7 @@ import numpy as np
 import pytest
 
 from screener.core import Array
-from screener.models.fitting import Fit, HyperPrior, prior_terms, fit
+from screener.models.fitting import Fit, HyperPrior, fit, prior_terms
 from screener.models.joint import JointData
 from screener.models.kernels import KERNELS
 from screener.models.laplace import laplace, with_errors
