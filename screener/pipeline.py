@@ -6,9 +6,8 @@ verdict.
 
 from __future__ import annotations
 
-from collections.abc import Callable, Sequence
-from dataclasses import asdict, dataclass, replace
-from functools import partial
+from collections.abc import Sequence
+from dataclasses import asdict, replace
 from typing import Any
 
 import numpy as np
@@ -17,49 +16,31 @@ from threadpoolctl import threadpool_limits
 from screener import __version__
 from screener.core import (
     Depth,
-    Finding,
     Grade,
     Observations,
     Rotation,
     Screening,
     Signal,
     SignalVerdict,
-    Star,
-    TimeSeries,
     Verdict,
 )
 from screener.curves import products
-from screener.evidence import own_null, run_all, run_test
-from screener.evidence.case import Case
-from screener.models.kepler import orbit_velocity
+from screener.judging import Judged, Progress, against_own_null, judge
 from screener.models.laplace import laplace
-from screener.models.nulls import DrawnSignal, NullDraws, injections, null_draws
-from screener.models.portrait import Portrait, Sighting, paint
+from screener.models.portrait import Portrait, paint
 from screener.models.posterior import sample
-from screener.models.rotation import PeriodDensity, estimate_rotation
-from screener.rules import Graded, RuleSet, grade, load_rules
-from screener.system import describe_system, stability_findings
+from screener.models.rotation import estimate_rotation
+from screener.rules import RuleSet, load_rules
+from screener.system import describe_system, references_used
 
 __all__ = ["Progress", "screen"]
 
-Progress = Callable[[str, float], None]
 _STEPS = 4000  # of each walker at the deep level
 _METHODS = ("baluev2008", "zechmeister2009", "rajpaul2015", "haywood2014", "delisle2020")
 
 
 def _silent(_stage: str, _share: float) -> None:
     """No progress wanted."""
-
-
-@dataclass(frozen=True, eq=False)
-class _Judged:
-    case: Case
-    findings: tuple[Finding, ...]
-    graded: Graded
-
-    @property
-    def signal(self) -> Signal:
-        return self.case.signal
 
 
 def screen(
@@ -72,6 +53,7 @@ def screen(
     progress: Progress | None = None,
     with_products: bool = True,
     workers: int = 1,
+    site: str | None = None,
 ) -> Screening:
     """Screen one star.
 
@@ -92,6 +74,9 @@ def screen(
         Whether to make the arrays behind the figures as well.
     workers : int
         Processes for the draws of the star's own null; does not change the result.
+    site : str, optional
+        Observatory (a name, or "latitude,longitude[,height]") for which the nights that would
+        settle an ambiguous signal are ranked.
 
     Raises
     ------
@@ -104,8 +89,9 @@ def screen(
     # two numeric threads on two busy cores make small factorisations hundreds of times slower
     with threadpool_limits(1):
         return _screen(
-            observations, depth, seed, rules, period, progress or _silent, with_products, workers
-        )
+            observations, depth, seed, rules, period, progress or _silent, with_products, workers,
+            site,
+        )  # fmt: skip
 
 
 def _screen(
@@ -117,6 +103,7 @@ def _screen(
     tell: Progress,
     with_products: bool,
     workers: int,
+    site: str | None,
 ) -> Screening:
     series = observations.series
     tell("rotation period", 0.0)
@@ -131,19 +118,21 @@ def _screen(
         progress=tell,
     )
     tell("lines of evidence", 0.75)
-    judged, known = _judge(
+    judged, known = judge(
         observations.star, series, portrait, rotation, density, rules, depth, seed
     )
-    tell("the system", 0.9)
+    if depth is not Depth.QUICK and judged:
+        judged = against_own_null(observations.star, portrait, judged, rules, seed, workers, tell)
+    tell("the system", 0.95)
     posterior = None
     if depth is Depth.DEEP:
         tell("sampling the posterior", 0.92)
         posterior = _sampled(portrait, seed)
     verdict = _verdict(
         observations, portrait, rotation, judged, known, posterior,
-        rules=rules, depth=depth, seed=seed,
+        rules=rules, depth=depth, seed=seed, site=site,
     )  # fmt: skip
-    verdict = replace(verdict, asked_period=period, rules_file=rules.overlay)
+    verdict = replace(verdict, asked_period=period, rules_file=rules.overlay, site=site)
     shown = None
     if with_products:
         tell("curves for the figures", 0.97)
@@ -152,137 +141,18 @@ def _screen(
     return Screening(verdict, shown)
 
 
-def _judge(
-    star: Star,
-    series: TimeSeries,
-    portrait: Portrait,
-    rotation: Rotation,
-    density: PeriodDensity | None,
-    rules: RuleSet,
-    depth: Depth,
-    seed: int,
-) -> tuple[list[_Judged], list[Signal]]:
-    """Findings and grade of every signal."""
-    known = [
-        Signal(f"K{i}", orbit, 0.0, ("known",), known=True)
-        for i, orbit in enumerate(portrait.known, start=1)
-    ]
-    signals = [_signal(f"S{i}", sighting) for i, sighting in enumerate(portrait.sightings, start=1)]
-    judged = []
-    for signal, sighting in zip(signals, portrait.sightings, strict=True):
-        others = tuple(s for s in (*signals, *known) if s is not signal)
-        own = orbit_velocity(sighting.assessment.white_orbit, series.time)
-        case = Case(
-            star=star,
-            series=series,
-            signal=signal,
-            others=others,
-            target_rv=portrait.residual + own,
-            residual_rv=portrait.residual,
-            rv_sd=portrait.white_sd,
-            rotation=rotation,
-            rotation_density=density,
-            depth=depth,
-            seed=seed,
-            assessment=sighting.assessment,
-        )
-        findings = run_all(case)
-        judged.append(_Judged(case, findings, grade(findings, rules, signal)))
-    return _in_company(star, judged, known, rules), known
-
-
-def _in_company(
-    star: Star, judged: Sequence[_Judged], known: Sequence[Signal], rules: RuleSet
-) -> list[_Judged]:
-    """Grade again with what the other signals mean for each: planets must live together.
-
-    Signals that the first pass calls stellar are no bodies; taking one out changes the rest.
-    """
-    if not judged:
-        return []
-    first = judged[0].case
-    grades = {j.signal.id: j.graded.grade for j in judged}
-    found = stability_findings(
-        star, [*(j.signal for j in judged), *known], grades, seed=first.seed, depth=first.depth
-    )
-    out = []
-    for item in judged:
-        findings = (*item.findings, found[item.signal.id])
-        out.append(_Judged(item.case, findings, grade(findings, rules, item.signal)))
-    return out
-
-
-def _judge_draw(star: Star, rules: RuleSet, series: TimeSeries, seed: int) -> list[DrawnSignal]:
-    """Screen one draw at quick depth."""
-    with threadpool_limits(1):
-        rotation, density = estimate_rotation(star, series)
-        portrait = paint(star, series, (), density, Depth.QUICK)
-        judged, _ = _judge(star, series, portrait, rotation, density, rules, Depth.QUICK, seed)
-    return [
-        DrawnSignal(
-            j.signal.orbit.period, j.signal.orbit.semi_amplitude, j.graded.score, j.graded.grade
-        )
-        for j in judged
-    ]
-
-
-def _against_own_null(
-    star: Star,
-    portrait: Portrait,
-    judged: Sequence[_Judged],
-    rules: RuleSet,
-    seed: int,
-    workers: int,
-    tell: Progress,
-) -> list[_Judged]:
-    """Draw the star without planets, screen the draws, and grade again with what they say."""
-    series, depth = judged[0].case.series, judged[0].case.depth
-    judge = partial(_judge_draw, star, rules)
-    at_stake = [j for j in judged if j.graded.grade is not Grade.LIKELY_STELLAR]
-    draws = null_draws(
-        series, portrait, judge, [j.graded.score for j in at_stake], depth=depth, seed=seed,
-        workers=workers, progress=lambda stage, share: tell(stage, 0.78 + 0.13 * share),
-    )  # fmt: skip
-    injected = {}
-    if at_stake:
-        tell("injecting the signal into draws", 0.91)
-        best = max(at_stake, key=lambda j: j.graded.score)
-        injected[best.signal.id] = injections(
-            series, portrait, judge, best.signal.orbit, depth=depth, seed=seed, workers=workers
-        )
-    nulls = NullDraws(draws, injected)
-    out = []
-    for item in judged:
-        case = replace(item.case, nulls=nulls, score=item.graded.score)
-        finding = run_test(own_null, case)
-        findings = tuple(finding if f.test == finding.test else f for f in item.findings)
-        out.append(_Judged(case, findings, grade(findings, rules, item.signal)))
-    return out
-
-
-def _signal(id: str, sighting: Sighting) -> Signal:
-    gains = sighting.assessment.gains
-    return Signal(
-        id=id,
-        orbit=sighting.orbit,
-        false_alarm_probability=sighting.false_alarm_probability,
-        found_by=sighting.found_by,
-        white_gain=gains["white noise"],
-        activity_gain=gains["joint process"],
-    )
-
-
 def _verdict(
     observations: Observations,
     portrait: Portrait,
     rotation: Rotation,
-    judged: Sequence[_Judged],
+    judged: Sequence[Judged],
     known: Sequence[Signal],
     posterior: dict[str, Any] | None,
     *,
     rules: RuleSet,
     depth: Depth,
     seed: int,
+    site: str | None,
 ) -> Verdict:
     series = observations.series
     grades: dict[str, Grade] = {j.signal.id: j.graded.grade for j in judged}
@@ -297,6 +167,7 @@ def _verdict(
         depth=depth,
         seed=seed,
         rotation=rotation,
+        site=site,
     )
     verdicts = tuple(
         SignalVerdict(
@@ -312,6 +183,7 @@ def _verdict(
         for j in judged
     )
     used = {key for j in judged for f in j.findings for key in f.references}
+    used |= set(references_used(system))
     return Verdict(
         star=observations.star,
         version=__version__,

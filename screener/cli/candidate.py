@@ -37,6 +37,9 @@ __all__ = ["command"]
     help="Seed of every random draw.",
 )
 @click.option(
+    "--site", help="Observatory for which nights are ranked: a name, or LAT,LON[,HEIGHT]."
+)
+@click.option(
     "--rules", "rule_file", type=click.Path(path_type=Path), help="Rules to lay over the defaults."
 )
 @click.option(
@@ -54,6 +57,7 @@ def command(
     out: Path | None,
     depth: str,
     seed: int,
+    site: str | None,
     rule_file: Path | None,
     formats: tuple[str, ...],
     as_json: bool,
@@ -75,12 +79,12 @@ def command(
     from screener.rules import load_rules
 
     rules = load_rules(overlay=rule_file)
-    folder = out or Path("reports") / table.name.split(".")[0]
+    folder = out or Path("reports") / table.name.removesuffix(table.suffix)
     folder.mkdir(parents=True, exist_ok=True)
     with stage_progress(observations.star.name) as progress:
         screening = screen(
             observations, depth=Depth(depth), seed=seed, rules=rules, period=period,
-            progress=progress, workers=os.cpu_count() or 1,
+            progress=progress, workers=os.cpu_count() or 1, site=site,
         )  # fmt: skip
         progress("dossier and figures", 0.98)
         write_verdict(folder / "verdict.json", screening.verdict)

@@ -390,6 +390,7 @@ class Verdict:
     posterior: Mapping[str, Any] | None = None  # deep level: samples' summary and convergence
     asked_period: float | None = None  # d, a period that the user wanted graded
     rules_file: str | None = None  # what was laid over the default rules
+    site: str | None = None  # observatory for which nights were ranked
 
 
 @dataclass(frozen=True, eq=False)

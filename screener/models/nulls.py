@@ -103,6 +103,8 @@ def null_draws(
     planned draws has matched every one of them.
     """
     total = n_draws(depth, series.n_obs)
+    if not scores:  # nothing to hold against the draws: a first batch says how the star behaves
+        total = min(total, _BATCH)
     children = np.random.SeedSequence([seed, 13]).spawn(total)
     drawn = [draw_series(series, portrait, np.random.default_rng(c)) for c in children]
     out: list[tuple[DrawnSignal, ...]] = []

@@ -112,6 +112,7 @@ def verdict_from_dict(content: Mapping[str, Any]) -> Verdict:
         posterior=content.get("posterior"),
         asked_period=options.get("period_d"),
         rules_file=options.get("rules_file"),
+        site=options.get("site"),
     )
 
 

@@ -163,7 +163,11 @@ def verdict_to_dict(verdict: Verdict) -> dict[str, Any]:
         "star_known": _star(verdict),
         "references": verdict.references,
         "posterior": verdict.posterior,
-        "options": {"period_d": verdict.asked_period, "rules_file": verdict.rules_file},
+        "options": {
+            "period_d": verdict.asked_period,
+            "rules_file": verdict.rules_file,
+            "site": verdict.site,
+        },
     }
     result: dict[str, Any] = plain(content)
     return result

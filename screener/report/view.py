@@ -396,5 +396,7 @@ def command_line(verdict: Verdict) -> str:
         parts += ["--period", repr(verdict.asked_period)]
     if verdict.rules_file is not None:
         parts += ["--rules", verdict.rules_file]
+    if verdict.site is not None:
+        parts += ["--site", verdict.site]
     parts += ["--depth", verdict.depth.value, "--seed", str(verdict.seed)]
     return shlex.join(parts)
