@@ -16,6 +16,7 @@ from __future__ import annotations
 import argparse
 import json
 import math
+import sys
 from dataclasses import dataclass, replace
 from pathlib import Path
 
@@ -155,15 +156,24 @@ def main(argv: list[str] | None = None) -> int:
     parser.add_argument("--eccentric", action="store_true", help="fit and draw eccentric orbits")
     parser.add_argument("--json", type=Path)
     arguments = parser.parse_args(argv)
-    found, failed = [], 0
+    found: list[Pull] = []
+    failed = 0
     with threadpool_limits(1):
         for child in np.random.SeedSequence(arguments.seed).spawn(arguments.series):
             try:
-                found += pulls(np.random.default_rng(child), arguments.eccentric)
+                own = pulls(np.random.default_rng(child), arguments.eccentric)
             except NumericalError:
                 failed += 1
+                continue
+            except KeyboardInterrupt:  # the table of what is done
+                break
+            found += own
+            done = sum(p.quantity == "K" for p in found)
+            words = "  ".join(f"{p.quantity} {p.pull:+.2f}" for p in own)
+            print(f"{done:4d}  pulls: {words}", file=sys.stderr, flush=True)
     rows = table(found)
-    print(f"{arguments.series} series, {failed} fits failed")
+    done = sum(p.quantity == "K" for p in found)
+    print(f"{done} series, {failed} more whose fits failed")
     print(f"{'quantity':10s} {'nominal':>8s} {'covered':>8s} {'+-':>6s} {'count':>10s} {'p':>7s}")
     for row in rows:
         error = math.sqrt(row.rate * (1 - row.rate) / row.total)
