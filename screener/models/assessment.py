@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import math
-from collections.abc import Sequence
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
 
 import numpy as np
@@ -182,10 +182,17 @@ def assess(
 
 
 def merge(
-    activity: Sequence[OrbitTerm], white: Sequence[OrbitTerm], baseline: float
+    activity: Sequence[OrbitTerm],
+    white: Sequence[OrbitTerm],
+    fitted: Mapping[OrbitTerm, float],
+    baseline: float,
 ) -> list[OrbitTerm]:
-    """Both lists as one: of two that cannot be told apart the activity model's stays."""
-    return [
-        *activity,
-        *(t for t in white if not any(same_period(t.period, a.period, baseline) for a in activity)),
-    ]
+    """Both lists as one: of two that cannot be told apart the activity model's stays.
+
+    ``fitted`` holds the period of each after its fit.
+    """
+
+    def known(term: OrbitTerm) -> bool:
+        return any(same_period(fitted[term], fitted[a], baseline) for a in activity)
+
+    return [*activity, *(t for t in white if not known(t))]

@@ -14,7 +14,7 @@ from dataclasses import dataclass
 import numpy as np
 
 from screener.core import Array, Depth, KnownPlanet, TimeSeries
-from screener.models.fitting import Fit
+from screener.models.fitting import FREQUENCY_REACH, Fit
 from screener.models.joint import OrbitTerm
 from screener.models.noise import NoiseModel
 from screener.search.false_alarm import analytic, effective_baseline, gain_with_free_scale
@@ -124,7 +124,13 @@ def _best_peak(
         glance = noise.glance([*terms, term], result)
         trials.append((glance.objective + log_occurrence(term.period), term, glance))
     _, term, start = max(trials, key=lambda item: item[0])
-    return term, noise.fit([*terms, term], near=[start])
+    best = noise.fit([*terms, term], near=[start])
+    offset = best.model.orbit_parameters(best.parameters)[-1][0]
+    if abs(offset) > 0.95 * FREQUENCY_REACH:  # the peak was only a flank: start from where it led
+        moved = noise.term(noise.orbits(best)[-1].period)
+        if _apart(np.array([1 / moved.period]), terms, noise.data.span)[0]:
+            term, best = moved, noise.fit([*terms, moved], near=[best])
+    return term, best
 
 
 def _shape(noise: NoiseModel, terms: list[OrbitTerm], result: Fit) -> tuple[list[OrbitTerm], Fit]:
@@ -227,6 +233,7 @@ def _search(
         fits.append(result)
     if found and found[0].found_by == name:
         found, result = _settle_aliases(series, noise, found, result, len(known))
+        found, result = _without_twins(noise, found, result, len(known))
         fits[-1] = result
     return Search(tuple(found), result, tuple(fits), grid, tuple(gains), bandwidth, span)
 
@@ -264,6 +271,25 @@ def _settle_aliases(
             result = trial
             found[i] = Found(other, found[i].false_alarm_probability, found[i].found_by)
     return found, result
+
+
+def _without_twins(
+    noise: NoiseModel, found: list[Found], result: Fit, n_known: int
+) -> tuple[list[Found], Fit]:
+    """Drop the later of two orbits that the fits have drawn together into a beat."""
+    periods = [o.period for o in noise.orbits(result)]
+    terms = list(result.model.orbits)
+    twins = {
+        later
+        for later in range(n_known, len(terms))
+        for earlier in range(later)
+        if abs(1 / periods[later] - 1 / periods[earlier]) < 1 / noise.data.span
+    }
+    if not twins:
+        return found, result
+    keep = [t for i, t in enumerate(terms) if i not in twins]
+    found = [f for i, f in enumerate(found) if i + n_known not in twins]
+    return found, noise.fit(keep, near=[result])
 
 
 def _apart(

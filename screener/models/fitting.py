@@ -12,9 +12,12 @@ from scipy.optimize import minimize
 from screener.core import Array, NumericalError
 from screener.models.joint import JointModel
 
-__all__ = ["Fit", "HyperPrior", "fit", "prior_terms", "starting_point"]
+__all__ = ["FREQUENCY_REACH", "Fit", "HyperPrior", "fit", "prior_terms", "starting_point"]
 
 _REFUSED = 1e12
+# How far an orbit's frequency may move, in its own parameter: 0.6 resolution elements, so that two
+# orbits found 1.3 apart never become one.
+FREQUENCY_REACH = 0.6 * 2 * math.pi
 
 
 @dataclass(frozen=True)
@@ -96,8 +99,7 @@ def prior_terms(model: JointModel, prior: HyperPrior) -> tuple[Array, Array, Arr
         upper[jitter.start + j] = math.log(max(30 * typical, 5.0))
     start = slices["orbits"].start
     for term in model.orbits:
-        # the frequency may move by one resolution element
-        lower[start], upper[start] = -2 * math.pi, 2 * math.pi
+        lower[start], upper[start] = -FREQUENCY_REACH, FREQUENCY_REACH
         if term.eccentric:
             # e of most planets is small: half-normal of width 0.3 in the vector (Kipping 2013,
             # MNRAS 434, L51, has mean 0.22)

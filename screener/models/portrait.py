@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import math
-from collections.abc import Callable, Sequence
+from collections.abc import Callable, Mapping, Sequence
 from dataclasses import dataclass, replace
 
 import numpy as np
@@ -132,7 +132,12 @@ def paint(
             process = choice.noise
             bare = process.fit(accepted, near=[], fresh=True)
             on_top = replace(on_top, fit=choice.fit, fits=(bare, *on_top.fits[1:]))
-    found = _united(on_top.found, in_white.found, series.baseline)
+    fitted = {
+        term: orbit.period
+        for noise, fit in ((white, in_white.fit), (process, on_top.fit))
+        for term, orbit in zip(fit.model.orbits, noise.orbits(fit), strict=True)
+    }
+    found = _united(on_top.found, in_white.found, fitted, series.baseline)
     terms = [f.term for f, _ in found]
     activity_terms = [*accepted, *(f.term for f in on_top.found)]
     models = [white, white_noise(scaled, decorrelate=True)]
@@ -180,16 +185,19 @@ def _with_errors(
 
 
 def _united(
-    activity: Sequence[Found], white: Sequence[Found], baseline: float
+    activity: Sequence[Found],
+    white: Sequence[Found],
+    fitted: Mapping[OrbitTerm, float],
+    baseline: float,
 ) -> list[tuple[Found, tuple[str, ...]]]:
     """One list without doubles; each with the searches that found it."""
-    terms = merge([f.term for f in activity], [f.term for f in white], baseline)
+    terms = merge([f.term for f in activity], [f.term for f in white], fitted, baseline)
     out = []
     for term in terms:
         twins = [f for f in (*activity, *white) if f.term is term] + [
             f
             for f in white
-            if f.term is not term and same_period(f.term.period, term.period, baseline)
+            if f.term is not term and same_period(fitted[f.term], fitted[term], baseline)
         ]
         sources = tuple(dict.fromkeys(f.found_by for f in twins))
         fap = min(f.false_alarm_probability for f in twins)
