@@ -129,10 +129,17 @@ def _environment(escape: bool) -> jinja2.Environment:
         undefined=jinja2.StrictUndefined,
         trim_blocks=True,
         lstrip_blocks=True,
+        finalize=_finalized,
     )
     environment.filters["md"] = _markdown_escaped
     environment.filters["num"] = lambda v, n=5: "not known" if v is None else f"{v:.{n}g}"
     return environment
+
+
+def _finalized(value: Any) -> Any:
+    """Text of the user's without what is neither seen nor a line feed."""
+    plain = isinstance(value, str) and not isinstance(value, Markup)
+    return printable(value, lines=True) if plain else value
 
 
 def _markdown_escaped(value: object) -> str:
