@@ -306,8 +306,10 @@ class CompiledQuasiPeriodic:
     def apply(self, blocks: Blocks, r: Array, columns: Array) -> tuple[Array, ...]:
         gg, dg, dd = blocks.gg, blocks.dg, blocks.dd
         if dg is None or dd is None:
-            # only the upper triangle is there: the lower one for BLAS
-            return (np.asarray(blas.dsymm(1.0, gg.T, r[0][:, None] * columns, lower=1)),)
+            # only the upper triangle is there, the lower one for BLAS; its product of a symmetric
+            # matrix with many columns is slow for few
+            each = [blas.dsymv(1.0, gg.T, column, lower=1) for column in r[0] * columns.T]
+            return (np.stack(each, axis=1),)
         n = gg.shape[0]
         r11, r12, r22 = r[:, :, None]
         on_g = r11 * columns[:n]

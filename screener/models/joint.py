@@ -30,7 +30,13 @@ from screener.models.joint_data import orbit_columns as _orbit_columns
 from screener.models.joint_gradient import Work, combinations, joint_gradient, residuals
 from screener.models.kernels import Kernel, Lags
 from screener.models.latent import Engine, engine
-from screener.models.linear_algebra import cholesky, gram_of_inverse, half_solve
+from screener.models.linear_algebra import (
+    cholesky,
+    factor_and_inverse,
+    gram_of_inverse,
+    half_solve,
+    multiply,
+)
 
 __all__ = ["JointData", "JointModel", "OrbitTerm", "Solution"]
 
@@ -179,16 +185,20 @@ class JointModel:
         flat = stacked.reshape(-1, stacked.shape[2])
         gram = flat.T @ flat
         gram += self._column_precision
-        blocks, log_det = None, 0.0
+        blocks, log_det, triangle = None, 0.0, None
         factor = stacked_q = half = np.zeros((0, flat.shape[1]))
         q, r = np.zeros((0, *weight.shape)), np.zeros((0, n))
         if how is not None:
             q, r = _thin_qr(self._loadings(parameters)[:, None, :] * weight[:, :, None], rank)
             stacked_q = _project(q, stacked)
             blocks, capacitance = how.forward(data.lags, parameters[self.slices["kernel"]], r)
-            factor = cholesky(capacitance, "the activity model")
+            if gradient:  # the gradient needs the inverse anyway, and products are faster
+                factor, triangle = factor_and_inverse(capacitance, "the activity model")
+                half = multiply(triangle, stacked_q)
+            else:
+                factor = cholesky(capacitance, "the activity model")
+                half = half_solve(factor, stacked_q)
             log_det = 2 * float(np.log(np.diagonal(factor)).sum())
-            half = half_solve(factor, stacked_q)
             gram += half.T @ half
             gram -= stacked_q.T @ stacked_q
         small = cholesky(gram[1:, 1:].copy(order="F"), "the linear terms")
@@ -202,8 +212,8 @@ class JointModel:
         if not math.isfinite(log_likelihood):
             raise NumericalError(f"the log-likelihood is {log_likelihood} (chi2 {chi2})")
         work = Work(
-            weight, q, r, blocks, factor, stacked, stacked_q, half, small, np.asarray(beta),
-            log_likelihood, variance, jitter2,
+            weight, q, r, blocks, factor, triangle, stacked, stacked_q, half, small,
+            np.asarray(beta), log_likelihood, variance, jitter2,
         )  # fmt: skip
         return work, orbit_gradients
 
@@ -211,7 +221,7 @@ class JointModel:
 
     def solve(self, parameters: Array) -> Solution:
         """Everything a search or a prediction needs at these parameters."""
-        work, _ = self._work(parameters, gradient=False, reference=True)
+        work, _ = self._work(parameters, gradient=True, reference=True)
         n = self.data.n_obs
         mix, inverse_small = combinations(work, profile=False)
         uv, st = residuals(work, mix)
@@ -219,8 +229,8 @@ class JointModel:
         precision = -(uv[0, :, 1:] @ uv[0, :, 1:].T)
         diagonal = np.ones(n)
         activity = np.zeros(n)
-        if self.kernel is not None:
-            lower = gram_of_inverse(work.factor)
+        if work.triangle is not None:
+            lower = gram_of_inverse(work.triangle)
             inverse = lower + np.tril(lower, -1).T
             for i in range(self.rank):
                 for j in range(self.rank):
@@ -315,16 +325,17 @@ def _project(q: Array, stacked: Array) -> Array:
 def _thin_qr(loading: Array, rank: int) -> tuple[Array, Array]:
     """Gram-Schmidt of the loadings of every time: q (rank, n_series, n), r as in ``Work``."""
     first = loading[:, :, 0]
-    r11 = np.sqrt(np.einsum("sn,sn->n", first, first))
-    q1 = first / np.where(r11 > 0, r11, 1.0)
+    r11 = np.sqrt((first * first).sum(axis=0))
+    q1 = first / (r11 + (r11 == 0))
     if rank == 1:
         return q1[None], r11[None]
     second = loading[:, :, 1]
-    r12 = np.einsum("sn,sn->n", q1, second)
+    r12 = (q1 * second).sum(axis=0)
     rest = second - q1 * r12
-    r22 = np.sqrt(np.einsum("sn,sn->n", rest, rest))
+    r22 = np.sqrt((rest * rest).sum(axis=0))
     # a remainder at rounding level is no direction of its own
-    size = np.sqrt(np.einsum("sn,sn->n", second, second))
-    r22 = np.where(r22 > 1e-10 * size, r22, 0.0)
-    q2 = np.where(r22 > 0, rest / np.where(r22 > 0, r22, 1.0), 0.0)
+    r22 *= r22 > 1e-10 * np.sqrt((second * second).sum(axis=0))
+    alone = r22 == 0
+    q2 = rest / (r22 + alone)
+    q2 *= ~alone
     return np.stack([q1, q2]), np.stack([r11, r12, r22])

@@ -17,7 +17,7 @@ from scipy.linalg import lapack
 from screener.core import Array
 from screener.models.kernels import Blocks
 from screener.models.latent import Engine
-from screener.models.linear_algebra import gram_of_inverse, half_solve
+from screener.models.linear_algebra import gram_of_inverse, multiply
 
 if TYPE_CHECKING:
     from screener.models.joint import JointModel
@@ -34,6 +34,7 @@ class Work:
     r: Array  # (3, n_obs): r11, r12, r22, or (1, n_obs)
     blocks: Blocks | None
     factor: Array  # lower Cholesky factor of B
+    triangle: Array | None  # its inverse, where the gradient was asked for
     stacked: Array  # whitened data and linear terms, (n_series, n_obs, 1 + p)
     stacked_q: Array  # the same in the space of the loadings, (rank n_obs, 1 + p)
     half: Array  # factor^-1 stacked_q
@@ -60,12 +61,16 @@ def combinations(work: Work, profile: bool) -> tuple[Array, Array]:
 
 
 def residuals(work: Work, mix: Array) -> tuple[Array, Array]:
-    """Whitened (u, V), shape (n_series, n_obs, columns), and B^-1 times their projections."""
+    """Whitened (u, V), shape (n_series, n_obs, columns), and B^-1 times their projections.
+
+    ``work`` must hold the inverse ``triangle``.
+    """
     n_series, n, width = work.stacked.shape
     uv = (work.stacked.reshape(-1, width) @ mix).reshape(n_series, n, -1)
-    if work.q.shape[0] == 0:
+    if work.triangle is None:
         return uv, np.zeros((0, mix.shape[1]))
-    st = half_solve(work.factor, (mix.T @ work.half.T).T, transposed=True)
+    # in Fortran order, as LAPACK wants it
+    st = multiply(work.triangle, (mix.T @ work.half.T).T, transposed=True)
     change = st - work.stacked_q @ mix
     for k, q in enumerate(work.q):
         uv += q[:, :, None] * change[k * n : (k + 1) * n][None]
@@ -86,8 +91,8 @@ def joint_gradient(
     uv, st = residuals(work, mix)
     # twice the derivative in each log variance: diagonal of u u^T + V V^T - K^-1, whitened
     twice = np.einsum("snm,snm->sn", uv, uv) - 1
-    if how is not None and work.blocks is not None:
-        weights = gram_of_inverse(work.factor, st)
+    if how is not None and work.blocks is not None and work.triangle is not None:
+        weights = gram_of_inverse(work.triangle, st)
         diagonal = np.einsum("ii->i", weights)
         inverse_diagonal = np.einsum("ij,ij->i", st, st) - diagonal
         for i, q in enumerate(work.q):

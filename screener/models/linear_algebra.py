@@ -10,9 +10,18 @@ from scipy.linalg import blas, lapack
 
 from screener.core import Array, NumericalError
 
-__all__ = ["cholesky", "gram_of_inverse", "half_solve", "inverse_triangle"]
+__all__ = [
+    "cholesky",
+    "factor_and_inverse",
+    "gram_of_inverse",
+    "half_solve",
+    "inverse_triangle",
+    "multiply",
+]
 
 _LEAF = 64  # rows below which LAPACK's own inverse of a triangle is the faster one
+_FEW = 4  # columns up to which one substitution after the other is the faster way
+_TOGETHER = 256  # rows from which factor and inverse are computed together
 
 
 def cholesky(matrix: Array, what: str) -> Array:
@@ -34,9 +43,49 @@ def cholesky(matrix: Array, what: str) -> Array:
     return np.asarray(factor)
 
 
-def half_solve(factor: Array, right: Array, transposed: bool = False) -> Array:
-    """L^-1 X or, transposed, L^-T X."""
-    return np.asarray(blas.dtrsm(1.0, factor, right, lower=1, trans_a=int(transposed)))
+def half_solve(factor: Array, right: Array) -> Array:
+    """L^-1 X."""
+    if right.shape[1] > _FEW:
+        return np.asarray(blas.dtrsm(1.0, factor, right, lower=1))
+    out = np.empty(right.shape, order="F")
+    for j in range(right.shape[1]):
+        out[:, j] = blas.dtrsv(factor, right[:, j], lower=1)
+    return out
+
+
+def multiply(triangle: Array, right: Array, transposed: bool = False) -> Array:
+    """L X or, transposed, L^T X for a lower triangle."""
+    return np.asarray(blas.dtrmm(1.0, triangle, right, lower=1, trans_a=int(transposed)))
+
+
+def factor_and_inverse(matrix: Array, what: str) -> tuple[Array, Array]:
+    """``cholesky`` and the inverse of the factor, cheaper together; the matrix may be overwritten.
+
+    The first half's inverse takes the place of a substitution in the factorisation. Raises as
+    ``cholesky``.
+    """
+    n = matrix.shape[0]
+    if n <= _TOGETHER:
+        factor = cholesky(matrix, what)
+        return factor, inverse_triangle(factor)
+    half = n // 2
+    first, last = slice(0, half), slice(half, n)
+    factor, inverse = np.zeros((n, n), order="F"), np.zeros((n, n), order="F")
+    upper_factor = cholesky(matrix[first, first].copy(order="F"), what)
+    upper_inverse = inverse_triangle(upper_factor)
+    corner = blas.dtrmm(1.0, upper_inverse, matrix[last, first], side=1, lower=1, trans_a=1)
+    rest = blas.dsyrk(-1.0, corner, 1.0, matrix[last, last].copy(order="F"), lower=1, overwrite_c=1)
+    lower_factor = cholesky(rest, what)
+    lower_inverse = inverse_triangle(lower_factor)
+    factor[first, first], factor[last, first], factor[last, last] = (
+        upper_factor, corner, lower_factor,
+    )  # fmt: skip
+    corner = blas.dtrmm(-1.0, lower_inverse, corner, lower=1, overwrite_b=1)
+    corner = blas.dtrmm(1.0, upper_inverse, corner, side=1, lower=1, overwrite_b=1)
+    inverse[first, first], inverse[last, first], inverse[last, last] = (
+        upper_inverse, corner, lower_inverse,
+    )  # fmt: skip
+    return factor, inverse
 
 
 def inverse_triangle(factor: Array) -> Array:
@@ -66,9 +115,12 @@ def _invert(factor: Array, out: Array) -> None:
     out[last, first] = blas.dtrmm(1.0, out[first, first], corner, lower=1, side=1, overwrite_b=1)
 
 
-def gram_of_inverse(factor: Array, columns: Array | None = None) -> Array:
-    """Lower triangle (zeros above) of the inverse, or of ``columns`` columns^T - inverse."""
-    triangle, _ = lapack.dlauum(inverse_triangle(factor), lower=1, overwrite_c=1)
+def gram_of_inverse(triangle: Array, columns: Array | None = None) -> Array:
+    """Lower triangle (zeros above) of the inverse, or of ``columns`` columns^T - inverse.
+
+    ``triangle`` is the inverse of the factor and is overwritten.
+    """
+    inverse, _ = lapack.dlauum(triangle, lower=1, overwrite_c=1)
     if columns is None:
-        return np.asarray(triangle)
-    return np.asarray(blas.dsyrk(1.0, columns, -1.0, triangle, lower=1, overwrite_c=1))
+        return np.asarray(inverse)
+    return np.asarray(blas.dsyrk(1.0, columns, -1.0, inverse, lower=1, overwrite_c=1))
