@@ -9,6 +9,10 @@ from __future__ import annotations
 
 import numpy as np
 
+from screener.models.evidence_integrals.direct import (
+    direct_evidence_without_planets,
+    direct_log_likelihood,
+)
 from screener.models.evidence_integrals.importance import (
     Effort,
     ImportanceSampler,
@@ -32,6 +36,8 @@ __all__ = [
     "JeffreysPrior",
     "PlanetPrior",
     "annealed_evidence",
+    "direct_evidence_without_planets",
+    "direct_log_likelihood",
     "importance_ladder",
     "log_evidence",
     "log_evidence_without_planets",

@@ -47,11 +47,11 @@ class WidthMixture:
 def width_mixture(prior: JeffreysPrior, largest_amplitude: float) -> WidthMixture:
     """The mixture that stands for a modified Jeffreys prior, for K up to ``largest_amplitude``.
 
-    The density is matched to about 1e-3 for K between 0.05 K0 and ``largest_amplitude``; less than
-    1e-2 of the prior lies below, where no data can tell the difference.
+    The density is matched to 2e-3 for K between 0.06 K0 and ``largest_amplitude``; less than 1e-2
+    of the prior lies below, where its mass is right and no data can tell the difference.
     """
     low = math.log(0.5 * (prior.scale / (30 * largest_amplitude)) ** 2)
-    high = math.log(0.5 / 0.02**2)
+    high = math.log(0.5 / 0.01**2)
     log_t = np.arange(low, high, _STEP)
     t = np.exp(log_t)
     # K0^-2 erfcx(t^1/2) exp(-K^2 t / K0^2) / (2 pi L) dt, with normals (t / pi K0^2) exp(...)

@@ -105,7 +105,7 @@ class Cloud:
         ladder = np.cumsum(self._normal(temper))
         spot = (np.arange(n_samples) + rng.random()) / n_samples
         index = np.searchsorted(ladder, spot * ladder[-1])
-        return np.minimum(index, self.log_weight.size - 1).astype(np.intp)
+        return np.asarray(np.minimum(index, self.log_weight.size - 1), dtype=np.intp)
 
     def _normal(self, temper: float) -> Array:
         scaled = temper * (self.log_weight - self.log_weight.max())
@@ -330,7 +330,7 @@ class ImportanceSampler:
 
 
 def _smooth(probability: Array) -> Array:
-    """Spread a quarter of each cell's mass to either side: eccentricity shifts the peaks a little."""
+    """Spread a quarter of each cell's mass to either side, as eccentricity shifts peaks."""
     padded = np.pad(probability, 1)
     out = 0.5 * probability + 0.25 * (padded[:-2] + padded[2:])
     return np.asarray(out / out.sum())

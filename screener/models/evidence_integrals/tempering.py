@@ -48,7 +48,7 @@ class AnnealingEffort:
     """
 
     islands: int = 10
-    particles: int = 250
+    particles: int = 400
     sweeps: int = 5
     keep: float = 0.6
 
@@ -314,7 +314,7 @@ def _next_power(log_likelihood: Array, power: float, keep: float) -> float:
 
     def share(step: float) -> float:
         w = step * (log_likelihood - log_likelihood.max())
-        return float(np.exp(2 * logsumexp(w) - logsumexp(2 * w))) / w.size
+        return float(np.exp(2 * logsumexp(w) - logsumexp(2 * w)) / w.size)
 
     if share(1 - power) >= keep:
         return 1.0
