@@ -325,6 +325,8 @@ def _project(q: Array, stacked: Array) -> Array:
 def _thin_qr(loading: Array, rank: int) -> tuple[Array, Array]:
     """Gram-Schmidt of the loadings of every time: q (rank, n_series, n), r as in ``Work``."""
     first = loading[:, :, 0]
+    if rank == 1 and first.shape[0] == 1:
+        return np.sign(first)[None], np.abs(first)
     r11 = np.sqrt((first * first).sum(axis=0))
     q1 = first / (r11 + (r11 == 0))
     if rank == 1:

@@ -117,11 +117,16 @@ def orbit_columns(
     anomaly = 2 * math.pi * frequency * lever
     if not term.eccentric:
         cos, sin = np.cos(anomaly), np.sin(anomaly)
-        columns = np.stack([cos, -sin], axis=1)
+        columns = np.empty((cos.size, 2))
+        columns[:, 0] = cos
+        np.negative(sin, out=columns[:, 1])
         if not gradient:
             return columns, []
-        rate = lever / data.span
-        return columns, [np.stack([-sin * rate, -cos * rate], axis=1)]
+        rate = lever / -data.span
+        by_frequency = np.empty((cos.size, 2))
+        np.multiply(sin, rate, out=by_frequency[:, 0])
+        np.multiply(cos, rate, out=by_frequency[:, 1])
+        return columns, [by_frequency]
     x, y = parameters[1], parameters[2]
     size2 = x * x + y * y
     size = math.sqrt(size2) + 1e-12

@@ -21,7 +21,7 @@ __all__ = [
 
 _LEAF = 64  # rows below which LAPACK's own inverse of a triangle is the faster one
 _FEW = 4  # columns up to which one substitution after the other is the faster way
-_TOGETHER = 256  # rows from which factor and inverse are computed together
+_TOGETHER = 256  # rows beyond which work by halves and triangles pays
 
 
 def cholesky(matrix: Array, what: str) -> Array:
@@ -54,7 +54,9 @@ def half_solve(factor: Array, right: Array) -> Array:
 
 
 def multiply(triangle: Array, right: Array, transposed: bool = False) -> Array:
-    """L X or, transposed, L^T X for a lower triangle."""
+    """L X or, transposed, L^T X for a lower triangle (zeros above)."""
+    if triangle.shape[0] <= _TOGETHER:  # the zeros cost less than looking after them
+        return (right.T @ triangle).T if transposed else triangle @ right
     return np.asarray(blas.dtrmm(1.0, triangle, right, lower=1, trans_a=int(transposed)))
 
 
