@@ -142,7 +142,8 @@ def _orbit_gradient(
     model: JointModel, work: Work, uv: Array, mix: Array, orbit_gradients: list[list[Array]]
 ) -> Array:
     by_column = (uv[0] * work.weight[0][:, None]) @ -mix[1:].T
-    start, out = model.data.columns.shape[2], []
+    start = model.data.columns.shape[2]
+    out: list[float] = []
     for derivatives in orbit_gradients:
         columns = by_column[:, start : start + 2]
         out.extend(float(np.vdot(d, columns)) for d in derivatives)

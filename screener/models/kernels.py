@@ -286,7 +286,7 @@ class QuasiPeriodicCosine:
         rate_gradient[0] -= mix * 2 * omega**2
         rate_gradient[1] -= mix * 2 * inv2
         rate_gradient[3] = slope * (inv2 + omega**2 - 1 / q2)
-        return gradient + d_log_rate / rate * rate_gradient
+        return np.asarray(gradient + d_log_rate / rate * rate_gradient)
 
 
 def _quasi_periodic_rate_gradient(period: float, decay: float, shape: float) -> Array:
