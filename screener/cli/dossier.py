@@ -16,8 +16,9 @@ __all__ = ["command"]
 def command(folders: tuple[Path, ...]) -> None:
     """Draw dossier.html and figures/ into the folder of a screened star.
 
-    The star is screened once more from its recorded input, depth and seed; if that does not give
-    the recorded verdict, nothing is drawn.
+    Where the curves were kept (by ``candidate``) they are drawn as they are. Otherwise the star is
+    screened once more from its recorded input, depth and seed; if that does not give the recorded
+    verdict, nothing is drawn.
     """
     from screener.catalogue.folder import full_disk_told
 
@@ -35,6 +36,13 @@ def _draw(folder: Path) -> None:
     from screener.core import InputFault
     from screener.report.verdict_json import read_verdict
 
+    if (folder / "products.npz").is_file():
+        from screener.core import Screening
+        from screener.report import load_products, load_verdict, write_dossier
+
+        kept = load_products(folder / "products.npz")
+        write_dossier(Screening(load_verdict(folder / "verdict.json"), kept), folder)
+        return
     verdict = read_verdict(folder)
     entry: dict[str, Any] = verdict["input"]
     if not entry.get("file"):

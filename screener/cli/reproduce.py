@@ -76,8 +76,8 @@ def command(
         warnings.simplefilter("ignore")  # what matters is in the verdict's cautions
         screening = screen(
             inputs.observations, depth=Depth(then["depth"]), seed=then["seed"],
-            rules=inputs.rules, period=options.get("period_d"), progress=progress,
-            with_products=False, workers=os.cpu_count() or 1,
+            rules=inputs.rules, period=options.get("period_d"), site=options.get("site"),
+            progress=progress, with_products=False, workers=os.cpu_count() or 1,
         )  # fmt: skip
     now = json.loads(verdict_to_json(screening.verdict))
     match = compare(then, now, skip=(*inputs.hashes, "screener"))
