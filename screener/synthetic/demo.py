@@ -60,11 +60,11 @@ TALES: tuple[tuple[str, str, int, Recipe], ...] = (
     ),
     (
         "Heron 47",
-        "a truly ambiguous case: a weak planet on top of the half rotation period",
+        "a truly ambiguous case: a planet on top of the half rotation period",
         87,
         Recipe(
             "active dwarf",
-            fixed_planets=(_planet(9.62, 3.1, 0.0, 0.0, 0.6),),
+            fixed_planets=(_planet(9.62, 5.9, 0.0, 0.0, 0.6),),
             body_teff=4900.0,
             rotation=18.6,
             inclination=1.1,
