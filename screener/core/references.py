@@ -110,6 +110,9 @@ _ALL = (
     # orbits
     Reference("markley1995", "Markley, F. L.", 1995, "Kepler equation solver", "Celestial Mechanics and Dynamical Astronomy", "63", "101", "10.1007/BF00691917", "solving Kepler's equation"),
     Reference("kipping2013", "Kipping, D. M.", 2013, "Parametrizing the exoplanet eccentricity distribution with the Beta distribution", f"{_MN}: Letters", "434", "L51", "10.1093/mnrasl/slt075", "prior of the eccentricity"),
+    Reference("chen2017", "Chen, J. and Kipping, D.", 2017, "Probabilistic forecasting of the masses and radii of other worlds", _APJ, "834", "17", "", "radius from mass"),
+    Reference("cumming2008", "Cumming, A. and Butler, R. P. and Marcy, G. W. and others", 2008, "The Keck Planet Search: detectability and the minimum mass and orbital period distribution of extrasolar planets", "Publications of the Astronomical Society of the Pacific", "120", "531", "", "occurrence law of companions' masses"),
+    Reference("giles2017", "Giles, H. A. C. and Collier Cameron, A. and Haywood, R. D.", 2017, "A Kepler study of starspot lifetimes with respect to light-curve amplitude and spectral type", _MN, "472", "1618", "", "lifetimes of active regions"),
     Reference("feng2015", "Feng, Y. K. and Wright, J. T. and Nelson, B. and others", 2015, "The California Planet Survey IV ...", _APJ, "800", "22", "", "a drift as a lower limit on an outer companion"),
     Reference("goodman2010", "Goodman, J. and Weare, J.", 2010, "Ensemble samplers with affine invariance", "Communications in Applied Mathematics and Computational Science", "5", "65", "10.2140/camcos.2010.5.65", "ensemble sampler"),
     Reference("angladaescude2010", "Anglada-Escudé, G. and López-Morales, M. and Chambers, J. E.", 2010, "How eccentric orbital solutions can hide planetary systems in 2:1 resonant orbits", _APJ, "709", "168", "10.1088/0004-637X/709/1/168", "one eccentric planet or two in 2:1"),
