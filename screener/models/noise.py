@@ -12,6 +12,7 @@ from screener.core import Array, Orbit
 from screener.models.dataset import Scaled
 from screener.models.fitting import Fit, HyperPrior, fit, starting_point
 from screener.models.joint import JointData, JointModel, OrbitTerm
+from screener.models.joint_data import orbit_columns
 from screener.models.kernels import KERNELS, Kernel
 from screener.search.periodogram import Precision
 
@@ -128,8 +129,22 @@ class NoiseModel:
 
     def precision(self, result: Fit) -> Precision:
         """What a periodogram on top of this fit needs."""
-        solution = result.model.solve(result.parameters)
-        return Precision(solution.rv_weighted, solution.rv_precision)
+        model, x = result.model, result.parameters
+        if self.kernel is not None:
+            solution = model.solve(x)
+            return Precision(solution.rv_weighted, solution.rv_precision)
+        # white noise: diagonal less a few columns, which spares long series the dense matrix
+        data = model.data
+        jitter2 = np.exp(2 * x[model.slices["jitter"]])[data.jitter[0]]
+        weight = 1 / (data.variance[0] + jitter2)
+        columns = [data.columns[0]]
+        for term, values in zip(model.orbits, model.orbit_parameters(x), strict=True):
+            columns.append(orbit_columns(term, values, data, False)[0])
+        design = np.concatenate(columns, axis=1)
+        normal = design.T @ (weight[:, None] * design) + np.diag(1 / model.column_sd**2)
+        half = np.linalg.solve(np.linalg.cholesky(normal), (weight[:, None] * design).T).T
+        y = data.value[0]
+        return Precision(weight * y - half @ (half.T @ y), None, weight, half)
 
     def orbits(self, result: Fit) -> list[Orbit]:
         """The fitted orbits in physical units, with Laplace errors of the amplitude."""

@@ -26,7 +26,7 @@ _DRAWS = {Depth.QUICK: 0, Depth.STANDARD: 50, Depth.DEEP: 400}
 _INJECTIONS = {Depth.QUICK: 0, Depth.STANDARD: 10, Depth.DEEP: 60}
 _BATCH = 10
 _FEWEST_DRAWS = 10  # fewer say nothing
-_FULL_DRAWS_UP_TO = 170  # velocities; the cost of a draw grows with the third power
+_FULL_DRAWS_UP_TO = 150  # velocities; the cost of a draw grows with the third power
 
 
 @dataclass(frozen=True)

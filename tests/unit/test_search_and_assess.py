@@ -202,3 +202,15 @@ def test_number_of_draws_depends_on_depth_and_length_only() -> None:
     assert n_draws(Depth.DEEP, 150) == 400
     assert n_draws(Depth.STANDARD, 220) < 50
     assert n_draws(Depth.STANDARD, 700) == 0
+
+
+def test_the_lean_precision_is_the_dense_one() -> None:
+    rng = np.random.default_rng(16)
+    series = _series(rng, n=50)
+    noise = white_noise(scaled_data(series, (), 1000.0))
+    result = noise.fit([noise.term(7.0), noise.term(31.0, True)], fresh=True)
+    lean, dense = noise.precision(result), result.model.solve(result.parameters)
+    assert lean.weight is not None and lean.low_rank is not None
+    matrix = np.diag(lean.weight) - lean.low_rank @ lean.low_rank.T
+    assert np.allclose(matrix, dense.rv_precision, atol=1e-9 * lean.weight.max())
+    assert np.allclose(lean.weighted, dense.rv_weighted, atol=1e-8)
