@@ -14,9 +14,10 @@ from scipy.special import logsumexp
 
 from screener.core import Array
 from screener.models.evidence_integrals.collapsed import Collapsed
-from screener.models.evidence_integrals.problem import PlanetPrior
+from screener.models.evidence_integrals.problem import EvidenceProblem, PlanetPrior
+from screener.models.evidence_integrals.proposal import Comb
 
-__all__ = ["CircularScan", "frequency_edges"]
+__all__ = ["CircularScan", "frequency_edges", "jump_combs"]
 
 _LOG_STEP = 0.08  # largest cell in ln f: periods beyond the baseline blur over that
 
@@ -148,3 +149,28 @@ class CircularScan:
             fixed = self.orthonormal(self.columns[rows])
             table[rows] = first[rows, None] + other.gains(fixed) + other.log_mass
         return table
+
+
+def jump_combs(problem: EvidenceProblem, n_planets: int) -> list[Comb]:
+    """Where long jumps in period go: the prior, and the peaks of successively cleaned scans.
+
+    They change how fast the particles mix, not what is estimated; they reach the whole prior.
+    """
+    collapsed = Collapsed(problem)
+    node = int(np.argmax(collapsed.nodes.log_zero))
+    combs = []
+    for prior in problem.planet_priors(n_planets):
+        scan = CircularScan(collapsed, prior, 10.0, node)
+        mass = np.exp(scan.log_mass)
+        total, fixed = 0.4 * mass, None
+        for _ in range(n_planets):
+            gain = scan.gains(fixed)[0]
+            for temper in (1.0, 0.3):
+                log_p = temper * gain + scan.log_mass
+                p = np.exp(log_p - log_p.max())
+                total = total + 0.3 / n_planets * p / p.sum()
+            best = scan.columns[int(np.argmax(gain))][None]
+            rows = best if fixed is None else np.concatenate([fixed, best], axis=1)
+            fixed = scan.orthonormal(rows)
+        combs.append(Comb(scan.edges, total / total.sum(), prior.eccentricity_scale))
+    return combs

@@ -13,7 +13,7 @@ from __future__ import annotations
 
 import math
 import time
-from dataclasses import dataclass
+from dataclasses import dataclass, fields
 
 import numpy as np
 from scipy import linalg
@@ -22,14 +22,14 @@ from scipy.stats import t as student
 from threadpoolctl import threadpool_limits
 
 from screener.core import Array
-from screener.models.evidence_integrals.collapsed import Collapsed
 from screener.models.evidence_integrals.orbit_basis import MAX_ECCENTRICITY, orbit_columns_batch
 from screener.models.evidence_integrals.problem import EvidenceEstimate, EvidenceProblem
 from screener.models.evidence_integrals.proposal import Comb
-from screener.models.evidence_integrals.scan import CircularScan
+from screener.models.evidence_integrals.scan import jump_combs
 
 __all__ = ["AnnealingEffort", "annealed_evidence"]
 
+_BLOCK = 512  # particles moved together; bounds the memory of the temporaries
 _ACCEPT = 0.3  # acceptance that the step size is steered to
 
 
@@ -40,15 +40,16 @@ class AnnealingEffort:
     Attributes
     ----------
     islands, particles : int
-        Independent populations, and particles in each.
+        Independent populations, and particles in each. With few particles an island often misses
+        part of the posterior and ln Z comes out low by more than the error says.
     sweeps : int
         Sweeps over all moves after each resampling.
     keep : float
         Each step raises the power so far that this share of the particles stays effective.
     """
 
-    islands: int = 10
-    particles: int = 400
+    islands: int = 6
+    particles: int = 600
     sweeps: int = 5
     keep: float = 0.6
 
@@ -70,9 +71,9 @@ class _State:
     residual: Array  # (n, n_obs), rotated
     log_likelihood: Array  # (n,)
 
-    def take(self, index: Array) -> None:
-        for name in ("orbit", "amplitude", "level", "columns", "residual", "log_likelihood"):
-            setattr(self, name, getattr(self, name)[index])
+    def rows(self, index: Array | slice) -> _State:
+        """Some particles: a view of a slice, a copy of an index array."""
+        return _State(*(getattr(self, f.name)[index] for f in fields(self)))
 
 
 class _Annealer:
@@ -168,11 +169,13 @@ class _Annealer:
     def sweep(self, state: _State, power: float) -> float:
         """All moves once; returns the acceptance of the local ones."""
         accepted = []
-        for j in self.rng.permutation(self.n_planets):
-            accepted.append(self._local(state, int(j), power))
-            self._independent(state, int(j), power, new_orbit=True)
-            self._independent(state, int(j), power, new_orbit=False)
-            self._jitter_move(state, power)
+        for first in range(0, state.level.size, _BLOCK):
+            part = state.rows(slice(first, first + _BLOCK))
+            for j in self.rng.permutation(self.n_planets):
+                accepted.append(self._local(part, int(j), power))
+                self._independent(part, int(j), power, new_orbit=True)
+                self._independent(part, int(j), power, new_orbit=False)
+                self._jitter_move(part, power)
         return float(np.mean(accepted))
 
     def _scale(self, state: _State, power: float) -> Array:
@@ -358,7 +361,7 @@ def annealed_evidence(
             log_weight = ((new - power) * state.log_likelihood).reshape(shape)
             log_z += logsumexp(log_weight, axis=1) - math.log(effort.particles)
             power = new
-            state.take(_resample(log_weight, rng))
+            state = state.rows(_resample(log_weight, rng))
             if power < 1:
                 for _ in range(effort.sweeps):
                     rate = annealer.sweep(state, power)
@@ -379,28 +382,3 @@ def annealed_evidence(
         time.perf_counter() - start,
         converged=error < 1.0,
     )
-
-
-def jump_combs(problem: EvidenceProblem, n_planets: int) -> list[Comb]:
-    """Where long jumps in period go: the prior, and the peaks of successively cleaned scans.
-
-    They change how fast the particles mix, not what is estimated; they reach the whole prior.
-    """
-    collapsed = Collapsed(problem)
-    node = int(np.argmax(collapsed.nodes.log_zero))
-    combs = []
-    for prior in problem.planet_priors(n_planets):
-        scan = CircularScan(collapsed, prior, 10.0, node)
-        mass = np.exp(scan.log_mass)
-        total, fixed = 0.4 * mass, None
-        for _ in range(n_planets):
-            gain = scan.gains(fixed)[0]
-            for temper in (1.0, 0.3):
-                log_p = temper * gain + scan.log_mass
-                p = np.exp(log_p - log_p.max())
-                total = total + 0.3 / n_planets * p / p.sum()
-            best = scan.columns[int(np.argmax(gain))][None]
-            rows = best if fixed is None else np.concatenate([fixed, best], axis=1)
-            fixed = scan.orthonormal(rows)
-        combs.append(Comb(scan.edges, total / total.sum(), prior.eccentricity_scale))
-    return combs
