@@ -48,8 +48,8 @@ class AnnealingEffort:
         Each step raises the power so far that this share of the particles stays effective.
     """
 
-    islands: int = 6
-    particles: int = 600
+    islands: int = 12
+    particles: int = 350
     sweeps: int = 5
     keep: float = 0.6
 
