@@ -7,6 +7,7 @@ from collections.abc import Callable, Mapping, Sequence
 from dataclasses import dataclass
 
 from screener.core import Grade, RuleEffect
+from screener.core.wording import QUANTITIES, TESTS, Quantity
 from screener.rules.grammar import ConditionError, Field, did_you_mean, parse_field
 from screener.rules.scope import SIGNAL, Scope, Value, holds
 from screener.rules.types import Rule, RuleSet
@@ -14,6 +15,8 @@ from screener.rules.types import Rule, RuleSet
 __all__ = ["SHORT_NAMES", "check_template", "next_step", "render", "would_change"]
 
 _YEAR = 365.25
+# what no observation and no analysis can change
+_GIVEN = (SIGNAL, "neighbours", "family", "sampling")
 _HOLE = re.compile(r"\{([^{}]*)\}")
 _FORM = re.compile(r"(\.[0-9])?[fge]")
 
@@ -139,7 +142,7 @@ def _together(goal: str, need: float, rules: RuleSet, scope: Scope) -> str:
         ends = (min(rule.weight, 0.0) - now, max(rule.weight, 0.0) - now)
         gain = ends[1] if need > 0 else -ends[0]
         test = rule.ramp.of.test if rule.ramp is not None else rule.fields[0].test
-        if gain > 0.0 and test != SIGNAL:
+        if gain > 0.0 and test not in _GIVEN:
             room[test] = room.get(test, 0.0) + gain
     taken: list[str] = []
     left = abs(need)
@@ -148,14 +151,23 @@ def _together(goal: str, need: float, rules: RuleSet, scope: Scope) -> str:
         left -= room[test]
         if left <= 0.0:
             side = "for a planet" if need > 0 else "for the star"
-            if len(taken) == 1:
-                return _sentence(goal, f"{taken[0]} spoke {side} as clearly as it can")
-            names = ", ".join(taken[:-1]) + f" and {taken[-1]}"
-            words = f"{names} all spoke" if len(taken) > 2 else f"{names} both spoke"
-            return f"No single finding would change the grade; it would {goal} if {words} {side}."
+            names = [_quoted(test) for test in taken]
+            if len(names) == 1:
+                return _sentence(goal, f"the test {names[0]} spoke {side} as clearly as it can")
+            listed = ", ".join(names[:-1]) + f" and {names[-1]}"
+            words = f"{listed} {'all' if len(names) > 2 else 'both'} spoke"
+            return (
+                f"No single finding would change the grade; it would {goal} if the tests "
+                f"{words} {side}."
+            )
     return (
         f"No finding of these tests would change the grade; it is {left:.1f} too far in log-odds."
     )
+
+
+def _quoted(test: str) -> str:
+    words = TESTS.get(test)
+    return f"“{words.title}”" if words is not None else test
 
 
 def _sentence(goal: str, words: str, rest: str = "") -> str:
@@ -174,6 +186,8 @@ def _change(rule: Rule, need: float, scope: Scope) -> _Change | None:
     """How one weight could move the score by ``need``; None if it cannot."""
     if rule.effect != "weight" or rule.weight == 0.0:
         return None
+    if (rule.ramp.of if rule.ramp is not None else rule.fields[0]).test in _GIVEN:
+        return None
     share = rule.share(scope)
     wanted = share + need / rule.weight
     if not 0.0 <= wanted <= 1.0 + 1e-12:
@@ -186,14 +200,17 @@ def _change(rule: Rule, need: float, scope: Scope) -> _Change | None:
     if rule.when is not None and holds(rule.when, scope) is False:
         return None
     now, then = scope.number(rule.ramp.of), rule.ramp.at(wanted)
+    said = QUANTITIES.get(str(rule.ramp.of)) or Quantity(str(rule.ramp.of))
+    then *= said.scale
     if now is None:
         known = scope.value(Field(rule.ramp.of.test, "present")) is True
         verb = "were known and" if known else "could be had and"
-        upward = rule.ramp.stop > rule.ramp.start
-        words = f"{rule.ramp.of} {verb} were {'at least' if upward else 'at most'} {then:.3g}"
+        bound = "at least" if rule.ramp.stop > rule.ramp.start else "at most"
+        words = f"{said.name} {verb} were {bound} {then:.3g}{said.unit}"
         return _Change(10.0 + wanted, f"{words} {mark}")
+    now *= said.scale
     verb = "rose" if then > now else "fell"
-    words = f"{rule.ramp.of} {verb} from {now:.3g} to {_beyond(then, now)} {mark}"
+    words = f"{said.name} {verb} from {now:.3g} to {_beyond(then, now)}{said.unit} {mark}"
     return _Change(abs(wanted - share), words)
 
 
@@ -214,8 +231,9 @@ def _step_change(rule: Rule, share: float, mark: str, scope: Scope) -> _Change |
     telling: Callable[[Field], Value] = scope.value
     absent = all(telling(f) is None for f in rule.fields)
     said = rule.sentence.rstrip(".")
+    said = said[:1].lower() + said[1:]
     if share == 1.0:
-        return _Change(2.0, f"it no longer held that: {said} {mark}")
+        return _Change(2.0, f"it were no longer found that {said} {mark}")
     if rule.cure:
         return _Change(12.0 if absent else 3.0, f"{rule.cure} {mark}")
-    return _Change(12.0 if absent else 3.0, f"it held that: {said} {mark}")
+    return _Change(12.0 if absent else 3.0, f"it were found that {said} {mark}")

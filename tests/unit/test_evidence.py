@@ -213,6 +213,18 @@ def test_sampling_counts() -> None:
     assert "Thin" in thin.sentence
 
 
+def test_missing_phases_come_up_when_the_star_does():
+    # two seasons from 1 January to 8 June, a night in five; worked out with a calendar by hand
+    time = np.concatenate([2458484.5 + 365.25 * k + np.arange(0.0, 160.0, 5.0) for k in (0, 1)])
+    # 410 d: days 155 to 365 after 1 January 2019 are missing; they return from 19 July 2020
+    # to 14 February 2021, and the star is up from two weeks before 1 January on
+    assert sampling.gap_season(time, 410.0) == "from December 2020 to February 2021"
+    # a gap of a year's period stays behind the Sun for ever
+    assert sampling.gap_season(time, 365.25) is None
+    assert sampling.gap_season(time, 50.0) is None  # any season will do
+    assert sampling.gap_season(time - 2450000.0, 410.0) is None  # no Julian dates
+
+
 def _beside(period: float, other: float, amplitude: float = 20.0) -> Finding:
     case = make_case(2, Recipe(period=period))
     orbit = Orbit(other, amplitude, eccentricity=0.4)
