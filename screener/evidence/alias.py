@@ -16,7 +16,7 @@ import numpy as np
 from screener.core import Array, Finding, Outcome
 from screener.evidence.case import Case
 from screener.evidence.lines import n_draws
-from screener.evidence.projected import gain, project
+from screener.evidence.projected import each_with_its_noise, gain, project
 
 __all__ = ["ID", "QUESTION", "REFERENCES", "REQUIRES", "family", "run"]
 
@@ -62,6 +62,25 @@ def _flags(case: Case, period: float) -> dict[str, bool | str | None]:
     return {"rival_is_rotation": star, "rival_is_signal": other}
 
 
+def _gains(columns: Array, values: Array, n_steps: int) -> tuple[Array, Array]:
+    """Gain of each frequency, (G, S), and the largest of any alias beyond the stated period, (S,).
+
+    ``columns`` (n_obs, G, 2) and ``values`` (n_obs, S) are whitened; the first ``n_steps``
+    frequencies are the stated one within its resolution, of which the best is taken.
+    """
+    each = gain(columns, values)
+    own = np.argmax(each[:n_steps], axis=0)
+    further = np.empty(values.shape[1])
+    for pair in np.unique(own):
+        rows = own == pair
+        basis, _ = np.linalg.qr(columns[:, pair])
+        flat = columns[:, n_steps:].reshape(columns.shape[0], -1)
+        beyond = flat - basis @ (basis.T @ flat)
+        pairs = beyond.reshape(columns.shape[0], -1, 2)
+        further[rows] = np.max(gain(pairs, values[:, rows]), axis=0)
+    return each, further
+
+
 def run(case: Case) -> Finding:
     """The finding for one signal; not applicable without aliases in the sampling."""
     time, period = case.series.time, case.signal.orbit.period
@@ -74,41 +93,36 @@ def run(case: Case) -> Finding:
             references=REFERENCES,
         )
     projected, rng, n = project(case), case.rng(ID), n_draws(case)
+    n_members, n_steps = members.size, _STEPS.size
     fine = (members[:, None] + _STEPS[None, :] / case.series.baseline).ravel()
     angle = 2.0 * np.pi * (time - time.mean())[:, None] * fine[None, :]
     raw = np.stack([np.cos(angle), np.sin(angle)], axis=2)
-    columns = projected(raw.reshape(time.size, -1)).reshape(raw.shape)
-
-    n_members, n_steps = members.size, _STEPS.size
-
-    def gains(values: Array) -> Array:
-        return gain(columns, values).reshape(n_members, n_steps, -1)
-
-    values = projected(case.target_rv[:, None])
-    seen = gains(values)[..., 0]
-    own_pair = int(np.argmax(seen[0]))
-    own, _ = np.linalg.qr(columns[:, own_pair])
-    beyond = columns[:, n_steps:]
-    beyond = beyond - np.einsum("ni,igj->ngj", own, np.einsum("ni,ngj->igj", own, beyond))
-
-    def further(values: Array) -> Array:
-        """Largest gain of any alias on top of the stated period."""
-        return np.asarray(np.max(gain(beyond, values), axis=0))
-
+    flat = raw.reshape(time.size, -1)
+    columns, values = projected(flat).reshape(raw.shape), projected(case.target_rv[:, None])
+    gains, largest = _gains(columns, values, n_steps)
+    seen, observed = gains[:, 0].reshape(n_members, n_steps), float(largest[0])
     best = seen.max(axis=1)
     rival = 1 + int(np.argmax(best[1:]))
     statistic = float(best[0] - best[rival])
-    null = further(projected(projected.fakes(rng, n)))
-    observed = float(further(values)[0])
-    p_value = float((1 + np.count_nonzero(null >= observed)) / (1 + n))
-    critical = float(np.quantile(null, 1.0 - _ALPHA))
-    pair = rival * n_steps + int(np.argmax(seen[rival]))
-    solution = np.linalg.lstsq(columns[:, pair], values[:, 0], rcond=None)[0]
-    fakes = projected.fakes(rng, max(60, n // 4))
-    at_rival = projected((raw[:, pair] @ solution)[:, None] + fakes)
-    power = float(np.mean(further(at_rival) > critical))
-    wins = gains(at_rival).max(axis=1)
-    rival_wins = float(np.mean(wins[1:].max(axis=0) > wins[0]))
+
+    def signal(member: int) -> Array:
+        """The fitted signal at a member of the family, shape (n_obs, 1)."""
+        pair = member * n_steps + int(np.argmax(seen[member]))
+        solution = np.linalg.lstsq(columns[:, pair], values[:, 0], rcond=None)[0]
+        return np.asarray(raw[:, pair] @ solution)[:, None]
+
+    n_true = max(60, n // 4)
+    fakes = projected.fakes(rng, n + n_true)
+    fakes[:, :n] += signal(0)
+    fakes[:, n:] += signal(rival)
+    beyond, lead = np.empty(n + n_true), np.empty(n + n_true)
+    for rows, x, y in each_with_its_noise(case, projected.noise, fakes, flat):
+        gains, beyond[rows] = _gains(x.reshape(raw.shape), y, n_steps)
+        lead[rows] = gains[:n_steps].max(axis=0) - gains[n_steps:].max(axis=0)
+    p_value = float((1 + np.count_nonzero(beyond[:n] >= observed)) / (1 + n))
+    critical = float(np.quantile(beyond[:n], 1.0 - _ALPHA))
+    power = float(np.mean(beyond[n:] > critical))
+    rival_wins = float(np.mean(lead[n:] < 0.0))
     other = float(1.0 / members[rival])
     flags = _flags(case, other)
     parameters: dict[str, float | int | bool | str | None] = {

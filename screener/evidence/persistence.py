@@ -2,8 +2,9 @@
 
 Null: a strictly periodic signal in the fitted noise (red plus white) at the real times; a small
 p-value speaks against a planet. Three looks at what the strict signal leaves over, which under
-the null do not depend on its amplitude. Each is calibrated by simulation; they are joined by
-their largest deviation, which is the statistic, in standard deviations of the simulations:
+the null do not depend on its amplitude. Each is calibrated by simulation, with the noise fitted
+anew to every simulated series; they are joined by their largest deviation, which is the
+statistic, in standard deviations of the simulations:
 
 - the log-likelihood gain of an amplitude and phase for each season over common ones;
 - the gain of a further wave at the period under a Gaussian envelope of free place and width
@@ -19,14 +20,14 @@ with a life of two rotation periods (or three times its own period).
 
 from __future__ import annotations
 
-from dataclasses import dataclass, replace
+from dataclasses import dataclass
 
 import numpy as np
 
 from screener.core import Array, Finding, IntArray, Outcome
 from screener.evidence.case import Case
-from screener.evidence.lines import n_draws, noise_beside_signal, signal_columns
-from screener.evidence.projected import Projected, gain, project, with_noise
+from screener.evidence.lines import n_draws, signal_columns
+from screener.evidence.projected import Projected, each_with_its_noise, gain, project
 
 __all__ = ["ID", "QUESTION", "REFERENCES", "REQUIRES", "parts_of", "run"]
 
@@ -80,30 +81,36 @@ class _Looks:
         return np.stack([uneven, best, ahead])
 
 
-def _looks(case: Case, projected: Projected) -> _Looks:
+def _columns(case: Case) -> tuple[Array, int]:
+    """The signal, the signal in each part but the last, and under each envelope, as columns.
+
+    Shape (n_obs, 2 + 2 parts + 2 envelopes), and the number of such parts.
+    """
     time = case.series.time
     wave = signal_columns(case)
-    strict, _ = np.linalg.qr(projected(wave))
     label = parts_of(time, case.signal.orbit.period)
-    n_parts = int(label[-1]) + 1
-    pieces = [wave * (label == part)[:, None] for part in range(n_parts - 1)]
-    if pieces:
-        columns = projected(np.concatenate(pieces, axis=1))
-        columns -= strict @ (strict.T @ columns)
-        left, size, _ = np.linalg.svd(columns, full_matrices=False)
-        by_part = left[:, size > 1e-6 * size[0]]
-    else:
-        by_part = np.zeros((time.size, 0))
+    n_parts = int(label[-1])
+    pieces = [wave * (label == part)[:, None] for part in range(n_parts)]
     span = time[-1] - time[0]
     envelopes = [
-        np.exp(-0.5 * ((time - place) / (width * span)) ** 2)
+        np.exp(-0.5 * ((time - place) / (width * span)) ** 2)[:, None] * wave
         for width in _WIDTHS
         for place in time[0] + span * (np.arange(_PLACES) + 0.5) / _PLACES
     ]
-    columns = np.stack([e[:, None] * wave for e in envelopes], axis=1)
-    flat = projected(columns.reshape(time.size, -1))
-    flat -= strict @ (strict.T @ flat)
-    return _Looks(strict, by_part, flat.reshape(columns.shape))
+    return np.concatenate([wave, *pieces, *envelopes], axis=1), n_parts
+
+
+def _looks(columns: Array, n_parts: int) -> _Looks:
+    """The looks for the columns of ``_columns`` once they are whitened."""
+    strict, _ = np.linalg.qr(columns[:, :2])
+    rest = columns[:, 2:]
+    rest = rest - strict @ (strict.T @ rest)
+    if n_parts:
+        left, size, _ = np.linalg.svd(rest[:, : 2 * n_parts], full_matrices=False)
+        by_part = left[:, size > 1e-6 * size[0]]
+    else:
+        by_part = np.zeros((columns.shape[0], 0))
+    return _Looks(strict, by_part, rest[:, 2 * n_parts :].reshape(columns.shape[0], -1, 2))
 
 
 def _wandering(case: Case, rng: np.random.Generator, n: int) -> Array:
@@ -123,30 +130,13 @@ def _wandering(case: Case, rng: np.random.Generator, n: int) -> Array:
     return np.asarray(orbit.semi_amplitude / np.sqrt(2.0) * np.einsum("nc,ncs->ns", wave, states))
 
 
-def _looks_at_wanderers(
-    case: Case, projected: Projected, rng: np.random.Generator, n: int
+def _looks_at(
+    case: Case, projected: Projected, values: Array, columns: Array, n_parts: int
 ) -> Array:
-    """The three statistics of n wandering signals in noise, shape (3, n).
-
-    The noise is fitted anew to each, for what wanders ends up partly in the noise.
-    """
-    values = _wandering(case, rng, n) + projected.fakes(rng, n)
-    wave = np.column_stack([projected.noise.nuisance, signal_columns(case)])
-    rest = values - wave @ np.linalg.lstsq(wave, values, rcond=None)[0]
-    noise = noise_beside_signal(case, rest, np.repeat(case.rv_sd[:, None], n, axis=1))
-    result = np.empty((3, n))
-    kinds, group = np.unique(np.stack([noise.tau, noise.share]), axis=1, return_inverse=True)
-    for kind in range(kinds.shape[1]):
-        rows = np.flatnonzero(group.ravel() == kind)
-        one = replace(
-            projected.noise,
-            tau=noise.tau[rows[:1]],
-            share=noise.share[rows[:1]],
-            scale=np.ones(1),
-        )
-        own = with_noise(one)
-        scaled = values[:, rows] / np.sqrt(noise.scale[rows])
-        result[:, rows] = _looks(case, own)(own(scaled))
+    """The three statistics of simulated velocities of shape (n_obs, n), shape (3, n)."""
+    result = np.empty((3, values.shape[1]))
+    for rows, x, y in each_with_its_noise(case, projected.noise, values, columns):
+        result[:, rows] = _looks(x, n_parts)(y)
     return result
 
 
@@ -161,22 +151,23 @@ def run(case: Case) -> Finding:
             references=REFERENCES,
         )
     projected, rng, n = project(case), case.rng(ID), n_draws(case)
-    looks = _looks(case, projected)
-    series = np.column_stack([case.target_rv, projected.fakes(rng, n)])
-    seen_and_null = looks(projected(series))
-    seen, null = seen_and_null[:, :1], seen_and_null[:, 1:]
+    columns, n_parts = _columns(case)
+    seen = _looks(projected(columns), n_parts)(projected(case.target_rv[:, None]))
+    n_wanderers = max(40, n // 5)
+    fakes = projected.fakes(rng, n + n_wanderers)
+    fakes[:, n:] += _wandering(case, rng, n_wanderers)
+    simulated = _looks_at(case, projected, fakes, columns, n_parts)
+    null, wandering = simulated[:, :n], simulated[:, n:]
     centre = np.mean(null, axis=1, keepdims=True)
     spread = np.maximum(np.std(null, axis=1, keepdims=True), 1e-9)
     statistic = float(np.max((seen - centre) / spread))
     deviation = np.max((null - centre) / spread, axis=0)
     p_value = float((1 + np.count_nonzero(deviation >= statistic)) / (1 + n))
     critical = np.quantile(deviation, 1.0 - _ALPHA)
-    wandering = _looks_at_wanderers(case, projected, rng, max(40, n // 5))
     power = float(np.mean(np.max((wandering - centre) / spread, axis=0) > critical))
     each = (1 + np.sum(null >= seen, axis=1)) / (1 + n)
-    n_parts = int(parts_of(time, period)[-1]) + 1
     parameters: dict[str, float | int] = {
-        "n_parts": n_parts,
+        "n_parts": n_parts + 1,
         "parts_p": float(each[0]),
         "envelope_gain": float(seen[1, 0]),
         "envelope_p": float(each[1]),

@@ -290,13 +290,13 @@ ENTRIES: dict[str, Entry] = {
 }
 
 
-def measure(name: str, runs: int) -> Row:
-    """Run one entry: ``runs`` stars of the null, as many with the effect."""
+def measure(name: str, runs: int, first: int = 0) -> Row:
+    """Run one entry: ``runs`` stars of the null from seed ``first`` on, as many with the effect."""
     entry = ENTRIES[name]
     module = tests()[entry.test]
     p_values, stated, seen = [], [], []
     spread = np.random.default_rng(1)
-    for seed in range(runs):
+    for seed in range(first, first + runs):
         finding = module.run(entry.null(seed))
         effect = module.run(entry.effect(100_000 + seed if entry.power_from_effect else seed))
         if finding.p_value is None:
@@ -325,11 +325,12 @@ def main(arguments: Sequence[str] | None = None) -> int:
     parser = argparse.ArgumentParser(description=__doc__.splitlines()[0] if __doc__ else "")
     parser.add_argument("--runs", type=int, default=500)
     parser.add_argument("--tests", default=",".join(ENTRIES))
+    parser.add_argument("--seed", type=int, default=0, help="first seed")
     options = parser.parse_args(arguments)
     print(f"{'test':22s} {'runs':>5s} {'KS p':>7s} {'p<.01':>6s} {'p<.05':>6s} {'stated':>7s} seen")
     worst = 0
     for name in options.tests.split(","):
-        row = measure(name.strip(), options.runs)
+        row = measure(name.strip(), options.runs, options.seed)
         good = row.ks_p > 0.01 and abs(row.stated - row.realised) < 0.10
         worst |= not good
         print(

@@ -53,8 +53,9 @@ def test_a_steady_signal_persists() -> None:
 
 
 def test_a_signal_of_one_season_does_not() -> None:
-    found = [persistence.run(_transient(seed)) for seed in range(10)]
-    assert _count(found, Outcome.SUPPORTS_STAR) >= 9
+    # 81 % of 80 such stars are called so at quick depth; fewer than 13 of 20 has a chance of 3 %
+    found = [persistence.run(_transient(seed)) for seed in range(20)]
+    assert _count(found, Outcome.SUPPORTS_STAR) >= 13
 
 
 def test_a_weak_signal_is_not_called_persistent() -> None:
