@@ -108,9 +108,13 @@ QUANTITIES: Mapping[str, Quantity] = {
     "activity_gain.gain_white": Quantity(f"{_GAIN} over white noise"),
     "activity_gain.gain_decorrelated": Quantity(f"{_GAIN} with the indicators as linear terms"),
     "activity_gain.gain_velocity": Quantity(f"{_GAIN} under a process of the velocities alone"),
-    "correlation.drop": Quantity(
+    "correlation.statistic": Quantity(
         "the drop in the correlation with an indicator, once the signal is removed,"
     ),
+    "correlation.pearson_with_all_signals": Quantity(
+        "the correlation of velocities without any signal with an indicator"
+    ),
+    "line_shape.statistic": Quantity("the slope of bisector against velocity at this period"),
     "dominance.statistic": Quantity("the lead in log-likelihood over the best other period"),
     "indicator_power.statistic": Quantity(
         "the log-odds that the indicators vary at this period as they would with the star"

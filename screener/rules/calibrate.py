@@ -216,6 +216,14 @@ def _write(path: Path, text: str) -> None:
         raise InputFault(str(path), problem, "Check the folder and its permissions") from None
 
 
+def _rules_before(rule_file: Path, plain: RuleSet) -> RuleSet:
+    """The rules as they grade now; with weights by judgement where a rule has come or gone."""
+    try:
+        return load_rules(rule_file)
+    except ScreenerError:
+        return plain
+
+
 @click.command()
 @click.option("--verdicts", type=click.Path(path_type=Path), required=True, help="Folder of a run.")
 @click.option("--truth", type=click.Path(path_type=Path), required=True, help="Truth, JSON.")
@@ -247,8 +255,8 @@ def main(
     """Fit the weights of the rules on screened stars whose truth is known."""
     rule_file = rule_file or DEFAULT_FILE
     try:
-        before = load_rules(rule_file)
         plain = load_rules(rule_file, use_weights=False)
+        before = _rules_before(rule_file, plain)
         population = read_population(verdicts, truth, plain)
         result = calibrate(
             population, plain, holdout=holdout, seed=seed, cost=cost,

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import importlib
+import inspect
 import pkgutil
 import tomllib
 from pathlib import Path
@@ -237,6 +238,25 @@ def test_every_test_of_the_default_rules_exists() -> None:
             found.add(name)
     unknown = set(load_rules().tests) - found - _FROM_ELSEWHERE
     assert not unknown
+
+
+def test_every_quantity_of_the_default_rules_is_reported_by_its_test() -> None:
+    """A rule on a parameter that no finding has would never count, and nobody would notice."""
+    sources = {}
+    for module in pkgutil.iter_modules(screener.evidence.__path__):
+        loaded = importlib.import_module(f"screener.evidence.{module.name}")
+        if hasattr(loaded, "ID"):
+            sources[loaded.ID] = inspect.getsource(loaded)
+    of_any_finding = {"statistic", "p_value", "power", "outcome", "present", "failed"}
+    missing = [
+        f"{rule.id}: {field}"
+        for rule in load_rules().rules
+        for field in rule.fields
+        if field.test in sources
+        and field.name not in of_any_finding
+        and f'"{field.name}"' not in sources[field.test]
+    ]
+    assert not missing
 
 
 def test_every_key_is_documented_and_used_by_the_defaults() -> None:
