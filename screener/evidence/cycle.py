@@ -32,7 +32,7 @@ __all__ = ["ID", "QUESTION", "REFERENCES", "REQUIRES", "long_period", "run"]
 ID = "cycle"
 QUESTION = "Does the signal follow the long-term activity cycle in phase?"
 REQUIRES = ("at least one indicator", "a period above 150 d")
-REFERENCES = ("zechmeister2009",)
+REFERENCES = ("zechmeister2009", "brown1975")
 
 _SHORTEST = 150.0
 
@@ -41,11 +41,15 @@ def long_period(case: Case, channels: Channels) -> tuple[float, float]:
     """Strongest period (d) above 150 d in the indicators jointly, and its chi-squared gain.
 
     White noise with the scatter found; zero points stay free, a slope does not (it would swallow
-    cycles longer than the baseline).
+    cycles longer than the baseline). Trials are nowhere more than a sixth of a resolution apart
+    in frequency, however long the baseline, nor by much in ln(period), up to two baselines.
     """
     time, labels = case.series.time, case.series.instrument
     longest = max(2.0 * case.series.baseline, 2.0 * _SHORTEST)
-    period: Array = np.geomspace(_SHORTEST, longest, 80)
+    slowest, fastest = 1.0 / longest, 1.0 / _SHORTEST
+    n_even = 1 + math.ceil(6.0 * case.series.baseline * (fastest - slowest))
+    even = np.linspace(slowest, fastest, max(n_even, 2))
+    period: Array = 1.0 / np.union1d(even, np.geomspace(slowest, fastest, 60))
     total = np.zeros(period.size)
     for k in range(len(channels.names)):
         rows = channels.noise.measured[:, k]

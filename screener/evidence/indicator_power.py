@@ -46,7 +46,7 @@ __all__ = [
 ID = "indicator_power"
 QUESTION = "Do the indicators vary at this period, and would they if the star made the signal?"
 REQUIRES = ("at least one indicator",)
-REFERENCES = ("queloz2001", "boisse2011")
+REFERENCES = ("queloz2001", "boisse2011", "brown1975")
 
 ALPHA = 0.01
 #: Scatter of ln(amplitude) about the expected one, and the chance that an indicator stays silent

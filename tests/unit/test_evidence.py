@@ -27,7 +27,7 @@ from screener.evidence import (
     sampling,
 )
 from screener.evidence.correlated import draw, fit_noise, whiten, zero_points
-from screener.evidence.lines import fit_columns, signal_columns, velocity_channel
+from screener.evidence.lines import channels_of, fit_columns, signal_columns, velocity_channel
 from screener.models.rotation import PeriodDensity
 from tests.statistical.evidence_cases import Recipe, make_case, nights
 
@@ -349,6 +349,28 @@ def test_a_cycle_out_of_phase_is_not_the_signal() -> None:
     # the control: same period, a quarter of a turn behind
     found = _outcomes(cycle, Recipe(period=600.0, seasons=5, n=150, response=1.2, lag=0.5 * np.pi))
     assert sum(f.outcome is Outcome.SUPPORTS_STAR for f in found) <= 3
+
+
+@pytest.mark.parametrize("seasons", [3, 20])
+def test_the_cycle_is_found_however_long_the_baseline(seasons: int) -> None:
+    # over twenty years the peak of a short cycle is a fiftieth of its period wide
+    for seed, cycle_period in enumerate((170.0, 400.0, 233.0)):
+        recipe = Recipe(period=cycle_period, seasons=seasons, n=150, response=1.5, lag=0.0)
+        case = make_case(seed, recipe)
+        channels = channels_of(case)
+        assert channels is not None
+        found, gain = cycle.long_period(case, channels)
+        resolution = cycle_period / case.series.baseline
+        assert found == pytest.approx(cycle_period, rel=0.3 * resolution)
+        time = case.series.time
+        angle = 2 * np.pi * time / cycle_period
+        design = np.column_stack([np.ones(time.size), np.cos(angle), np.sin(angle)])
+        exact = sum(
+            float(np.var(y) - np.var(y - design @ np.linalg.lstsq(design, y, rcond=None)[0]))
+            / float(np.var(y))
+            for y in channels.values.T
+        )
+        assert gain > 0.9 * time.size * exact
 
 
 def test_short_periods_are_not_asked() -> None:
