@@ -11,6 +11,7 @@ from threadpoolctl import threadpool_limits
 from screener.core import Depth, Finding, Grade, Rotation, Signal, Star, TimeSeries
 from screener.evidence import own_null, run_all, run_test
 from screener.evidence.case import Case
+from screener.evidence.latent import latent_activity
 from screener.models.kepler import orbit_velocity
 from screener.models.nulls import DrawnSignal, NullDraws, injections, null_draws
 from screener.models.portrait import Portrait, Sighting, paint
@@ -53,6 +54,7 @@ def judge(
     ]
     signals = [_signal(f"S{i}", sighting) for i, sighting in enumerate(portrait.sightings, start=1)]
     judged = []
+    activity = latent_activity(portrait.activity.fit, portrait.scaled) if signals else None
     for signal, sighting in zip(signals, portrait.sightings, strict=True):
         others = tuple(s for s in (*signals, *known) if s is not signal)
         own = orbit_velocity(sighting.assessment.white_orbit, series.time)
@@ -69,6 +71,7 @@ def judge(
             depth=depth,
             seed=seed,
             assessment=sighting.assessment,
+            activity=activity,
         )
         findings = run_all(case)
         judged.append(Judged(case, findings, grade(findings, rules, signal)))

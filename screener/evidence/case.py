@@ -8,6 +8,7 @@ from dataclasses import dataclass
 import numpy as np
 
 from screener.core import Array, Depth, Rotation, Signal, Star, TimeSeries
+from screener.evidence.latent import LatentActivity
 from screener.models.assessment import Assessment
 from screener.models.nulls import NullDraws
 from screener.models.rotation import PeriodDensity
@@ -40,6 +41,8 @@ class Case:
         The same as a probability density; None when nothing is known.
     assessment : Assessment or None
         The signal under every noise model.
+    activity : LatentActivity or None
+        Activity and its time derivative as the indicators tell them; None without indicators.
     nulls, score : NullDraws or None, float or None
         The star drawn without planets and screened, and the signal's log-odds before these are
         known; None at quick depth and on the first pass.
@@ -57,6 +60,7 @@ class Case:
     depth: Depth
     seed: int
     assessment: Assessment | None = None
+    activity: LatentActivity | None = None
     nulls: NullDraws | None = None
     score: float | None = None
 

@@ -10,6 +10,11 @@ share of surrogates with a drop at least as large, the power the share of surrog
 that ``indicator_power`` expects whose drop would count at p = 0.01. The p-value of the
 correlation as such (the largest of Pearson, Spearman and Kendall over the indicators) is the
 parameter ``correlation_p``.
+
+Spots move the velocities with the time derivative of what the indicators see, and so with a lag.
+Where a joint model was fitted, its latent activity G and derivative G' are found from the
+indicators (and from each surrogate) alone; ``latent_*`` are the correlations of the velocities
+with both, the multiple correlation with its p-value, and the phase by which G lags behind.
 """
 
 from __future__ import annotations
@@ -38,7 +43,7 @@ __all__ = ["ID", "QUESTION", "REFERENCES", "REQUIRES", "kendall", "pearson", "ra
 ID = "correlation"
 QUESTION = "Do the velocities follow an indicator, and less so once the signal is removed?"
 REQUIRES = ("at least one indicator",)
-REFERENCES = ("queloz2001", "theiler1992", "phipson2010")
+REFERENCES = ("queloz2001", "theiler1992", "phipson2010", "aigrain2012", "rajpaul2015")
 
 _KENDALL_ROWS = 100  # pairs grow with the square; beyond this a regular subset is used
 
@@ -120,6 +125,41 @@ def _coherence(case: Case, channels: Channels, k: int) -> float | None:
     return float(abs(cross) ** 2 / max(size_a * size_b, 1e-300))
 
 
+def _with_latent(case: Case, channels: Channels, fakes: Array) -> dict[str, float]:
+    """Correlations with the latent activity and its derivative; empty where it is not known."""
+    activity = case.activity
+    if activity is None or not set(activity.names) <= set(channels.names):
+        return {}
+    which = [channels.names.index(name) for name in activity.names]
+    values = np.concatenate([channels.values[:, which, None], fakes[:, which]], axis=2)
+    basis = channels.noise.nuisance
+    x, rest = _less_nuisance(case.target_rv, basis), _less_nuisance(case.residual_rv, basis)
+    g, d = (_less_nuisance(part, basis) for part in activity(values))
+    with_g, with_d = pearson(x, g), pearson(x, d)
+    size = np.sqrt(np.sum(g**2, axis=0) * np.sum(d**2, axis=0))
+    cross = np.sum(g * d, axis=0) / np.maximum(size, 1e-300)
+    square = with_g**2 + with_d**2 - 2.0 * with_g * with_d * cross
+    square /= np.maximum(1.0 - cross**2, 1e-9)
+    columns = signal_columns(case)
+    a, b = np.linalg.lstsq(columns, np.column_stack([x, g[:, 0]]), rcond=None)[0]
+    lag = math.atan2(b[1], a[1]) - math.atan2(b[0], a[0])
+
+    def chance(values: Array) -> float:
+        return float((1 + np.count_nonzero(values[1:] >= values[0])) / values.size)
+
+    return {
+        "latent_pearson": float(with_g[0]),
+        "latent_pearson_p": chance(np.abs(with_g)),
+        "latent_pearson_without_signal": float(pearson(rest, g[:, :1])[0]),
+        "latent_derivative_pearson": float(with_d[0]),
+        "latent_derivative_pearson_p": chance(np.abs(with_d)),
+        "latent_derivative_pearson_without_signal": float(pearson(rest, d[:, :1])[0]),
+        "latent_multiple": math.sqrt(max(float(square[0]), 0.0)),
+        "latent_p": chance(square),
+        "latent_phase_lag_rad": (lag + math.pi) % (2.0 * math.pi) - math.pi,
+    }
+
+
 def _spoken(case: Case, channels: Channels, fakes: Array, rng: np.random.Generator) -> Array:
     """Surrogates with the line that the star would put into them, shape as ``fakes``.
 
@@ -194,6 +234,7 @@ def run(case: Case) -> Finding:
         "phase_lag_err_rad": lag_err,
         "coherence": _coherence(case, channels, best),
         "n_draws": n,
+        **_with_latent(case, channels, fakes),
     }
     for k, name in enumerate(channels.names):
         parameters[f"{name}_pearson"] = float(seen[k, 0])
