@@ -49,8 +49,8 @@ class AnnealingEffort:
     """
 
     islands: int = 12
-    particles: int = 350
-    sweeps: int = 5
+    particles: int = 450
+    sweeps: int = 6
     keep: float = 0.6
 
     def __post_init__(self) -> None:
