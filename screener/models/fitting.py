@@ -5,6 +5,7 @@ from __future__ import annotations
 import math
 from collections.abc import Sequence
 from dataclasses import dataclass, replace
+from itertools import product
 
 import numpy as np
 from scipy.optimize import minimize
@@ -12,9 +13,26 @@ from scipy.optimize import minimize
 from screener.core import Array, NumericalError
 from screener.models.joint import JointModel
 
-__all__ = ["FREQUENCY_REACH", "Fit", "HyperPrior", "fit", "prior_terms", "starting_point"]
+__all__ = [
+    "FREQUENCY_REACH",
+    "Fit",
+    "HyperPrior",
+    "fit",
+    "prior_terms",
+    "starting_point",
+    "starting_points",
+]
+    "FREQUENCY_REACH",
+    "Fit",
+    "HyperPrior",
+    "fit",
+    "prior_terms",
+    "starting_point",
+    "starting_points",
+]
 
 _REFUSED = 1e12
+_SHIFTS = tuple(np.linspace(-1.8, 1.8, 7))  # of the period, in sd of its prior
 # How far an orbit's frequency may move, in its own parameter: 0.6 resolution elements, so that two
 # orbits found 1.3 apart never become one.
 FREQUENCY_REACH = 0.6 * 2 * math.pi
@@ -125,6 +143,53 @@ def starting_point(
             out[model.slices["a"]] *= signs
         out[model.slices["b"]] = slope
     return np.clip(out, lower, upper)
+
+
+def starting_points(
+    model: JointModel, prior: HyperPrior, signs: Array | None, count: int = 2
+) -> list[Array]:
+    """The likeliest of many starting points, at most ``count``, each of other signs.
+
+    Rotation periods across the prior, the sign of the velocities against the indicators and of
+    every amplitude on the derivative make separate optima, of which a single start often finds
+    a poor one; a likelihood costs a third of a step of the optimiser.
+
+    Raises
+    ------
+    NumericalError
+        If the likelihood can be computed at none of them.
+    """
+    mean, sd, lower, upper = prior_terms(model, prior)
+    first = starting_point(model, prior, signs)
+    a, b = model.slices["a"], model.slices["b"]
+    periodic = model.kernel is not None and "period" in model.kernel.names
+    shifts = _SHIFTS if periodic else (0.0,)
+    flips = [(1.0, -1.0)] * (b.stop - b.start)
+    if model.kernel is not None and model.data.n_series > 1:
+        flips = [(1.0, -1.0), *flips]
+    trials: list[tuple[float, tuple[float, ...], Array]] = []
+    cause: NumericalError | None = None
+    for shift, own in product(shifts, product(*flips)):
+        start = first.copy()
+        if periodic:
+            start[0] += shift * sd[0]
+        if model.kernel is not None and model.data.n_series > 1:
+            start[a.start] *= own[0]
+        start[b] *= own[len(own) - (b.stop - b.start) :]
+        start = np.clip(start, lower, upper)
+        z = (start - mean) / sd
+        try:
+            value = model.log_likelihood(start) - 0.5 * float(z @ z)
+        except NumericalError as error:
+            cause = error
+            continue
+        trials.append((value, own, start))
+    if not trials:
+        raise cause or NumericalError("no start of the fit has a finite likelihood")
+    out: dict[tuple[float, ...], Array] = {}
+    for _, own, start in sorted(trials, key=lambda t: -t[0]):
+        out.setdefault(own, start)
+    return list(out.values())[:count]
 
 
 def fit(

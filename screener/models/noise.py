@@ -10,7 +10,7 @@ import numpy as np
 
 from screener.core import Array, Orbit
 from screener.models.dataset import Scaled
-from screener.models.fitting import Fit, HyperPrior, fit, starting_point
+from screener.models.fitting import Fit, HyperPrior, fit, starting_points
 from screener.models.joint import JointData, JointModel, OrbitTerm
 from screener.models.joint_data import orbit_columns
 from screener.models.kernels import KERNELS, Kernel
@@ -59,9 +59,7 @@ class NoiseModel:
         model = self.model(key)
         starts = [self.transfer(model, other) for other in near]
         if fresh or not starts:
-            signs = self._signs()
-            slopes = (0.3, -0.3) if model.rank == 2 else (0.3,)
-            starts += [starting_point(model, self.prior, signs, b) for b in slopes]
+            starts += starting_points(model, self.prior, self._signs())
         result = fit(model, self.prior, starts, self.max_iterations)
         self.n_evaluations += result.n_evaluations
         if known is None or result.objective > known.objective:
