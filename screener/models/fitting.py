@@ -22,14 +22,6 @@ __all__ = [
     "starting_point",
     "starting_points",
 ]
-    "FREQUENCY_REACH",
-    "Fit",
-    "HyperPrior",
-    "fit",
-    "prior_terms",
-    "starting_point",
-    "starting_points",
-]
 
 _REFUSED = 1e12
 _SHIFTS = tuple(np.linspace(-1.8, 1.8, 7))  # of the period, in sd of its prior
