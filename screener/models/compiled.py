@@ -17,7 +17,7 @@ from scipy.linalg import blas
 from screener.core import Array
 from screener.models.kernels import Blocks, Lags
 
-__all__ = ["CompiledQuasiPeriodic"]
+__all__ = ["CompiledQuasiPeriodic", "back_one", "compile_with", "fill_one"]
 
 _SHIFT = np.int64(52)  # bits of a double's mantissa
 _BIAS = np.int64(1023)
@@ -26,7 +26,7 @@ _LN2_HIGH = 0.693147180369123816490  # Cody & Waite (1980): ln 2 in two parts
 _LN2_LOW = 1.90821492927058770002e-10
 
 
-def _compile(fast: set[str]) -> Callable[[Any], Any]:
+def compile_with(fast: set[str]) -> Callable[[Any], Any]:
     def decorate(function: Any) -> Any:
         try:
             return numba.njit(cache=True, fastmath=fast, error_model="numpy")(function)
@@ -44,7 +44,7 @@ _SUMS = {"contract", "nsz", "reassoc", "arcp"}  # sums in any order, so that the
 # tell that arrays do not overlap, or indices wrap, and does not vectorise.
 
 
-@_compile(_CAREFUL)
+@compile_with(_CAREFUL)
 def _exponential(x: Array, out: Array, power: Array, bits: Array) -> None:
     """exp of x <= 0, to 1e-15 relative; ``bits`` is ``power`` seen as integers.
 
@@ -73,8 +73,8 @@ def _exponential(x: Array, out: Array, power: Array, bits: Array) -> None:
         out[j] *= power[j]
 
 
-@_compile(_CAREFUL)
-def _fill_one(
+@compile_with(_CAREFUL)
+def fill_one(
     time: Array, c: Array, s: Array, decay: float, shape_term: float, r: Array, gg: Array, b: Array
 ) -> None:
     """Upper triangles of the kernel and of B, row by row."""
@@ -95,7 +95,7 @@ def _fill_one(
         row[0] += 1.0
 
 
-@_compile(_CAREFUL)
+@compile_with(_CAREFUL)
 def _fill_two(
     time: Array, c: Array, s: Array, decay: float, shape_term: float, omega: float, r: Array,
     gg: Array, dg: Array, dd: Array, b: Array,
@@ -141,8 +141,8 @@ def _fill_two(
         last[0] += 1.0
 
 
-@_compile(_SUMS)
-def _back_one(
+@compile_with(_SUMS)
+def back_one(
     time: Array, c: Array, s: Array, r: Array, gg: Array, weights: Array, by_r: Array
 ) -> tuple[float, float, float, float]:
     """Sums of f, f lag^2, f cos, f lag sin over the upper triangle; the gradient in r."""
@@ -173,7 +173,7 @@ def _back_one(
     return total, total_lag2, total_cos, total_lag_sin
 
 
-@_compile(_SUMS)
+@compile_with(_SUMS)
 def _back_to_r(r: Array, gg: Array, dg: Array, dd: Array, weights: Array, by_r: Array) -> None:
     """The gradient in R; see ``NumpyEngine.backward``."""
     n = r.shape[1]
@@ -206,7 +206,7 @@ def _back_to_r(r: Array, gg: Array, dg: Array, dd: Array, weights: Array, by_r: 
         on11[i] += row11
 
 
-@_compile(_SUMS)
+@compile_with(_SUMS)
 def _back_to_kernel(
     time: Array, c: Array, s: Array, decay: float, shape_term: float, omega: float, r: Array,
     gg: Array, dg: Array, dd: Array, weights: Array,
@@ -276,7 +276,7 @@ class CompiledQuasiPeriodic:
         gg = np.empty((n, n))
         if r.shape[0] == 1:
             b = np.empty((n, n))
-            _fill_one(lags.time, c, s, decay, shape_term, r[0], gg, b)
+            fill_one(lags.time, c, s, decay, shape_term, r[0], gg, b)
             return Blocks(gg, None, None, (c, s)), b.T
         b = np.empty((2 * n, 2 * n))
         dg, dd = np.empty((n, n)), np.empty((n, n))
@@ -293,7 +293,7 @@ class CompiledQuasiPeriodic:
         rank = 1 if blocks.dg is None else 2
         by_r = np.zeros((rank, rank, c.size))
         if blocks.dg is None or blocks.dd is None:
-            total, lag2, cos, lag_sin = _back_one(
+            total, lag2, cos, lag_sin = back_one(
                 lags.time, c, s, r[0], blocks.gg, weights, by_r[0, 0]
             )
             by_kernel = [omega * lag_sin, lag2 / decay**2 / shape_term, 2 * (total - cos)]

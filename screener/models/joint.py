@@ -29,7 +29,7 @@ from screener.models.joint_data import JointData, OrbitTerm, Solution
 from screener.models.joint_data import orbit_columns as _orbit_columns
 from screener.models.joint_gradient import Work, combinations, joint_gradient, residuals
 from screener.models.kernels import Kernel, Lags
-from screener.models.latent import Engine, engine
+from screener.models.latent import Engine, Single, engine, single
 from screener.models.linear_algebra import (
     cholesky,
     factor_and_inverse,
@@ -115,6 +115,10 @@ class JointModel:
     def _reference_engine(self) -> Engine | None:
         return None if self.kernel is None else engine(self.kernel, False)
 
+    @cached_property
+    def _single(self) -> Single | None:
+        return single(self, self._engine)
+
     def orbit_parameters(self, parameters: Array) -> list[Array]:
         """The parameters of each orbit."""
         start, out = self.slices["orbits"].start, []
@@ -135,6 +139,8 @@ class JointModel:
 
     def value_and_gradient(self, parameters: Array) -> tuple[float, Array]:
         """Marginal log-likelihood and its exact gradient, shape (n_parameters,)."""
+        if self._single is not None:
+            return self._single.value_and_gradient(parameters)
         work, orbit_gradients = self._work(parameters, gradient=True)
         return work.log_likelihood, self._gradient(parameters, work, orbit_gradients)
 

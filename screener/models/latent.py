@@ -7,14 +7,17 @@ it (``r`` holds r11, r12 and r22 of every time, or r11 alone), B = I + R C R^T.
 from __future__ import annotations
 
 import os
-from typing import Protocol
+from typing import TYPE_CHECKING, Protocol
 
 import numpy as np
 
 from screener.core import Array, ScreenerError
 from screener.models.kernels import Blocks, Kernel, Lags, QuasiPeriodic
 
-__all__ = ["Engine", "NumpyEngine", "engine"]
+if TYPE_CHECKING:
+    from screener.models.joint import JointModel
+
+__all__ = ["Engine", "NumpyEngine", "Single", "engine", "single"]
 
 
 class Engine(Protocol):
@@ -37,6 +40,14 @@ class Engine(Protocol):
 
     def apply(self, blocks: Blocks, r: Array, columns: Array) -> tuple[Array, ...]:
         """C R^T times columns (rank n, m): one array (n, m) for G and, with rank 2, for G'."""
+        ...
+
+
+class Single(Protocol):
+    """A whole likelihood with its gradient."""
+
+    def value_and_gradient(self, parameters: Array) -> tuple[float, Array]:
+        """As ``JointModel.value_and_gradient``."""
         ...
 
 
@@ -161,3 +172,14 @@ def engine(kernel: Kernel, compiled: bool | None) -> Engine:
             "the compiled likelihood needs numba: install the extra 'fast' or unset SCREENER_NUMBA"
         ) from error
     return CompiledQuasiPeriodic()
+
+
+def single(model: JointModel, how: Engine | None) -> Single | None:
+    """The compiled form of a series alone, where the engine is compiled and it is one."""
+    if how is None or isinstance(how, NumpyEngine):
+        return None
+    if model.data.n_series > 1 or model.rank != 1 or model.data.unmeasured is not None:
+        return None
+    from screener.models.compiled_single import CompiledSingle
+
+    return CompiledSingle(model)

@@ -11,6 +11,7 @@ from scipy.linalg import blas, lapack
 from screener.core import Array, NumericalError
 
 __all__ = [
+    "TOGETHER",
     "cholesky",
     "factor_and_inverse",
     "gram_of_inverse",
@@ -21,7 +22,7 @@ __all__ = [
 
 _LEAF = 64  # rows below which LAPACK's own inverse of a triangle is the faster one
 _FEW = 4  # columns up to which one substitution after the other is the faster way
-_TOGETHER = 256  # rows beyond which work by halves and triangles pays
+TOGETHER = 256  # rows beyond which work by halves and triangles pays
 
 
 def cholesky(matrix: Array, what: str) -> Array:
@@ -55,7 +56,7 @@ def half_solve(factor: Array, right: Array) -> Array:
 
 def multiply(triangle: Array, right: Array, transposed: bool = False) -> Array:
     """L X or, transposed, L^T X for a lower triangle (zeros above)."""
-    if triangle.shape[0] <= _TOGETHER:  # the zeros cost less than looking after them
+    if triangle.shape[0] <= TOGETHER:  # the zeros cost less than looking after them
         return (right.T @ triangle).T if transposed else triangle @ right
     return np.asarray(blas.dtrmm(1.0, triangle, right, lower=1, trans_a=int(transposed)))
 
@@ -67,7 +68,7 @@ def factor_and_inverse(matrix: Array, what: str) -> tuple[Array, Array]:
     ``cholesky``.
     """
     n = matrix.shape[0]
-    if n <= _TOGETHER:
+    if n <= TOGETHER:
         factor = cholesky(matrix, what)
         return factor, inverse_triangle(factor)
     half = n // 2

@@ -8,12 +8,12 @@ from dataclasses import replace
 import numpy as np
 import pytest
 
-from screener.core import ScreenerError
+from screener.core import NumericalError, ScreenerError
 from screener.models import linear_algebra
-from screener.models.joint import JointModel
+from screener.models.joint import JointModel, OrbitTerm
 from screener.models.kernels import KERNELS
 from screener.models.latent import NumpyEngine, engine
-from tests.unit.test_joint import _setup
+from tests.unit.test_joint import _data, _setup
 
 
 @pytest.mark.parametrize("profile", [False, True])
@@ -31,6 +31,36 @@ def test_compiled_equals_numpy(derivative: tuple[bool, ...], profile: bool) -> N
         value, gradient = replace(model, compiled=True).value_and_gradient(parameters)
         assert value == pytest.approx(expected, rel=1e-10)
         assert np.allclose(gradient, by_numpy, rtol=1e-10, atol=1e-10 * np.abs(by_numpy).max())
+
+
+@pytest.mark.parametrize("loading", [0.8, -0.8])
+@pytest.mark.parametrize("n", [40, 300])
+def test_a_series_alone_compiled_equals_numpy(n: int, loading: float) -> None:
+    """Both sides of the size at which algebra changes; a circle among the eccentric orbits."""
+    pytest.importorskip("numba")
+    rng = np.random.default_rng(n)
+    model = JointModel(
+        _data(n, 1, rng),
+        KERNELS["quasi-periodic"],
+        (False,),
+        (OrbitTerm(7.0, 2.0), OrbitTerm(33.0, 2.0, True), OrbitTerm(4.1, 2.0, True)),
+    )
+    hyper = [np.log(20.0), np.log(40.0), np.log(0.5), loading, -1.5, -2.0]
+    parameters = np.array([*hyper, 0.2, -0.1, 0.3, 1.4, 0.3, 0.0, 0.0])
+    expected, by_numpy = replace(model, compiled=False).value_and_gradient(parameters)
+    fast = replace(model, compiled=True)
+    assert fast._single is not None
+    value, gradient = fast.value_and_gradient(parameters)
+    assert value == pytest.approx(expected, rel=1e-11)
+    assert np.allclose(gradient, by_numpy, rtol=1e-9, atol=1e-9 * np.abs(by_numpy).max())
+
+
+def test_a_series_alone_names_its_failure() -> None:
+    pytest.importorskip("numba")
+    model, parameters = _setup("quasi-periodic", (False,))
+    parameters[3] = np.inf
+    with pytest.raises(NumericalError):
+        replace(model, compiled=True).value_and_gradient(parameters)
 
 
 def test_environment_and_argument_choose(monkeypatch: pytest.MonkeyPatch) -> None:
