@@ -199,12 +199,13 @@ class JointModel:
             stacked_q = _project(q, stacked)
             blocks, capacitance = how.forward(data.lags, parameters[self.slices["kernel"]], r)
             if gradient:  # the gradient needs the inverse anyway, and products are faster
-                factor, triangle = factor_and_inverse(capacitance, "the activity model")
+                pivots, triangle = factor_and_inverse(capacitance, "the activity model")
                 half = multiply(triangle, stacked_q)
             else:
                 factor = cholesky(capacitance, "the activity model")
                 half = half_solve(factor, stacked_q)
-            log_det = 2 * float(np.log(np.diagonal(factor)).sum())
+                pivots = np.diagonal(factor)
+            log_det = 2 * float(np.log(pivots).sum())
             gram += half.T @ half
             gram -= stacked_q.T @ stacked_q
         small = cholesky(gram[1:, 1:].copy(order="F"), "the linear terms")

@@ -33,7 +33,7 @@ class Work:
     q: Array  # (rank, n_series, n_obs)
     r: Array  # (3, n_obs): r11, r12, r22, or (1, n_obs)
     blocks: Blocks | None
-    factor: Array  # lower Cholesky factor of B
+    factor: Array  # lower Cholesky factor of B, empty where the gradient was asked for
     triangle: Array | None  # its inverse, where the gradient was asked for
     stacked: Array  # whitened data and linear terms, (n_series, n_obs, 1 + p)
     stacked_q: Array  # the same in the space of the loadings, (rank n_obs, 1 + p)

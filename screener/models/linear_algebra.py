@@ -62,33 +62,30 @@ def multiply(triangle: Array, right: Array, transposed: bool = False) -> Array:
 
 
 def factor_and_inverse(matrix: Array, what: str) -> tuple[Array, Array]:
-    """``cholesky`` and the inverse of the factor, cheaper together; the matrix may be overwritten.
+    """Diagonal of ``cholesky`` and the factor's inverse; the matrix may be overwritten.
 
-    The first half's inverse takes the place of a substitution in the factorisation. Raises as
-    ``cholesky``.
+    Cheaper together: the first half's inverse takes the place of a substitution in the
+    factorisation, and the factor itself is never put together. Raises as ``cholesky``.
     """
     n = matrix.shape[0]
     if n <= TOGETHER:
         factor = cholesky(matrix, what)
-        return factor, inverse_triangle(factor)
+        return np.diagonal(factor), inverse_triangle(factor)
     half = n // 2
     first, last = slice(0, half), slice(half, n)
-    factor, inverse = np.zeros((n, n), order="F"), np.zeros((n, n), order="F")
+    inverse = np.zeros((n, n), order="F")
     upper_factor = cholesky(matrix[first, first].copy(order="F"), what)
     upper_inverse = inverse_triangle(upper_factor)
     corner = blas.dtrmm(1.0, upper_inverse, matrix[last, first], side=1, lower=1, trans_a=1)
     rest = blas.dsyrk(-1.0, corner, 1.0, matrix[last, last].copy(order="F"), lower=1, overwrite_c=1)
     lower_factor = cholesky(rest, what)
     lower_inverse = inverse_triangle(lower_factor)
-    factor[first, first], factor[last, first], factor[last, last] = (
-        upper_factor, corner, lower_factor,
-    )  # fmt: skip
     corner = blas.dtrmm(-1.0, lower_inverse, corner, lower=1, overwrite_b=1)
     corner = blas.dtrmm(1.0, upper_inverse, corner, side=1, lower=1, overwrite_b=1)
     inverse[first, first], inverse[last, first], inverse[last, last] = (
         upper_inverse, corner, lower_inverse,
     )  # fmt: skip
-    return factor, inverse
+    return np.concatenate([np.diagonal(upper_factor), np.diagonal(lower_factor)]), inverse
 
 
 def inverse_triangle(factor: Array) -> Array:
