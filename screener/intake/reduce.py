@@ -44,17 +44,6 @@ def reduce_exposures(
     series, span = series.select(~marked), span[~marked]
     series = replace(series, indicators=tuple(_far(series, i, outliers) for i in series.indicators))
     series, span = _drop_thin(series, span, messages)
-    if series.n_obs < exposures.n_obs:
-        messages.append(
-            f"{exposures.n_obs} exposures gave {series.n_obs} bins of at most "
-            f"{float(np.max(span, initial=0.0)) * 24.0:.1f} h."
-        )
-    if outliers:
-        by_column: dict[str, int] = {}
-        for item in outliers:
-            by_column[item.column] = by_column.get(item.column, 0) + 1
-        listing = ", ".join(f"{n} in {column}" for column, n in by_column.items())
-        messages.append(f"Outliers left out of the fits: {listing}.")
     return series, tuple(outliers), float(np.max(span, initial=0.0))
 
 

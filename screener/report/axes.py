@@ -11,7 +11,15 @@ from matplotlib.ticker import FuncFormatter, NullFormatter
 from screener.core import Array, IntArray
 from screener.report.style import INSTRUMENTS, LIGHT, MARKERS
 
-__all__ = ["add_axes", "instrument_points", "instrument_style", "period_axis", "size", "year_axis"]
+__all__ = [
+    "broken",
+    "add_axes",
+    "instrument_points",
+    "instrument_style",
+    "period_axis",
+    "size",
+    "year_axis",
+]
 
 # Points beyond this number are drawn as a picture within a vector figure, to keep pages light.
 _MANY = 700
@@ -89,3 +97,15 @@ def period_axis(axes: Any, low: float, high: float) -> None:
     axes.set_xlim(low, high)
     axes.xaxis.set_major_formatter(FuncFormatter(lambda value, _: f"{value:g}"))
     axes.xaxis.set_minor_formatter(NullFormatter())
+
+
+def broken(grid: Array, *curves: Array) -> tuple[Array, ...]:
+    """Grid and curves with a NaN in each gap of the grid, so that no line is drawn across it.
+
+    Nothing was observed there, and a straight line would look like a model.
+    """
+    step = np.diff(grid)
+    if step.size == 0:
+        return (grid, *curves)
+    cuts = np.flatnonzero(step > 4 * np.median(step)) + 1
+    return tuple(np.insert(values, cuts, np.nan) for values in (grid, *curves))

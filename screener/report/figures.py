@@ -134,7 +134,8 @@ def _series(screening: Screening) -> FigureSpec:
         3.3,
         lambda fig: draw_series(fig, screening),
         "Velocities less the fitted zero point of each instrument (top) and what no model "
-        "explains (bottom). Outliers, marked with a cross, took no part in the fits.",
+        "explains (bottom, observed less computed). Outliers, marked with a cross, took no part "
+        "in the fits.",
         "the same swing in every season and every instrument.",
         "a swing that grows and fades from season to season, or differs between instruments.",
         f"Radial velocities of {verdict.star.name} against time, {verdict.n_obs} points from "
@@ -185,9 +186,9 @@ def _folds(screening: Screening) -> list[FigureSpec]:
                 2.9,
                 lambda fig, signal=signal, fold=fold: draw_fold(fig, screening, signal, fold),  # type: ignore[misc]
                 "Left: velocities less everything but this signal, folded at its period, with "
-                "the fitted orbit, binned points (large) and residuals. Right: amplitude and "
-                "phase fitted to one block of observations at a time; the dashed lines belong to "
-                "all data together.",
+                "the fitted orbit, binned points (large) and residuals (observed less computed). "
+                "Right: amplitude and phase fitted to one block of observations at a time; the "
+                "dashed lines belong to all data together.",
                 "points that follow one curve, and blocks that agree with the dashed lines.",
                 "scatter about the curve that is larger than the errors, and an amplitude or "
                 "phase that wanders from block to block.",

@@ -204,7 +204,7 @@ def _draw_phase(main, rest, screening, signal, fold, error) -> None:  # type: ig
     main.tick_params(labelbottom=False)
     main.set_xlim(-0.5, 0.5)
     main.set_ylabel("velocity (m/s)")
-    rest.set_ylabel("rest (m/s)")
+    rest.set_ylabel("O − C (m/s)")
     rest.set_xlabel(f"phase at {orbit.period:.6g} d (0: conjunction)")
     main.legend(
         loc="lower left", bbox_to_anchor=(0, 1.01), ncols=6, handletextpad=0.3, columnspacing=1.0

@@ -11,6 +11,7 @@ from matplotlib.figure import FigureBase
 from screener.core import Array, PeriodogramTrace, Products, Screening
 from screener.report.axes import (
     add_axes,
+    broken,
     instrument_points,
     period_axis,
     size,
@@ -82,7 +83,7 @@ def draw_series(fig: FigureBase, screening: Screening) -> None:
     _total_curve(top, screening, zero, span)
     top.tick_params(labelbottom=False)
     top.set_ylabel("velocity (m/s)")
-    low.set_ylabel("rest (m/s)")
+    low.set_ylabel("O − C (m/s)")
     low.set_xlabel(_time_label(zero))
     year_axis(top, zero)
     top.legend(loc="lower left", bbox_to_anchor=(0, 1.11), ncols=5, handletextpad=0.2)
@@ -120,9 +121,8 @@ def _total_curve(axes: Any, screening: Screening, zero: float, span: float) -> N
     if not periods or span / min(periods) > 40 or products.model_time.size < 2:
         return
     total = products.orbits_mean + products.activity_mean
-    axes.plot(
-        products.model_time - zero, total, color=LIGHT["muted"], lw=1.0, zorder=2, label="model"
-    )
+    grid, total = broken(products.model_time - zero, total)
+    axes.plot(grid, total, color=LIGHT["muted"], lw=1.0, zorder=2, label="model")
 
 
 def shown_periodograms(screening: Screening) -> tuple[PeriodogramTrace, ...]:
@@ -291,7 +291,7 @@ def draw_activity(fig: FigureBase, screening: Screening) -> None:
     for row, axes in enumerate(panels):
         rows = _shown_rows(products.model_time, stretch if row else None)
         grid = products.model_time[rows] - zero
-        mean, sd = products.activity_mean[rows], products.activity_sd[rows]
+        grid, mean, sd = broken(grid, products.activity_mean[rows], products.activity_sd[rows])
         axes.fill_between(
             grid, mean - sd, mean + sd, color=LIGHT["star"], alpha=0.22, lw=0, label="±1σ"
         )

@@ -73,6 +73,9 @@ def _signal(paper: Paper, signal: SignalView, figures: Sequence[FigureSpec]) -> 
     head = ("test", "says", "in words", "statistic", "p-value", "power")
     colours = ["muted" if f.colour == "muted" else "ink" for f in signal.findings]
     paper.table(head, rows, (15, 17, 42, 10, 9, 8), colours=colours)
+    if signal.not_run:
+        silent = " ".join(f"{f.test}: {f.sentence}" for f in signal.not_run)
+        paper.text(f"Without an answer: {silent}", 8, colour="muted")
     if signal.rules:
         paper.heading(f"Why {signal.id} has this grade", 11)
         reasons = [
@@ -106,21 +109,14 @@ def _star(paper: Paper, view: DossierView, figures: Sequence[FigureSpec]) -> Non
 def _rest(paper: Paper, view: DossierView) -> None:
     paper.heading("Model comparison")
     if view.models:
-        head = (
-            "hypothesis",
-            "planets",
-            "parameters",
-            "ln L",
-            "ln evidence",
-            "less best",
-            "converged",
-        )
-        paper.table(head, view.models, (30, 9, 12, 11, 12, 11, 11))
+        widths = (30, *(11,) * (len(view.models_head) - 1))
+        paper.table(view.models_head, view.models, widths)
+        paper.text(view.models_note, 8, colour="muted")
     else:
         paper.text("No models were compared at this depth.")
     paper.heading("The star's null")
     for name, finding in view.null:
-        paper.text(f"{name}: {finding.sentence} {finding.details}")
+        paper.text(f"{name}: {finding.sentence} {finding.numbers}")
     if not view.null:
         paper.text("No draws of the star's own activity were made at this depth.")
     _system(paper, view)

@@ -77,6 +77,10 @@ def system_blocks(system: Mapping[str, Any]) -> tuple[Block, ...]:
     blocks += _planets(system.get("planets"))
     blocks += _stability(system.get("stability"))
     blocks += _nights(system.get("nights"))
+    outer = system.get("outer_companion")
+    mass, error = nested(outer, "mass_min_mjup"), nested(outer, "mass_min_err_mjup")
+    if _is_number(mass) and _is_number(error) and mass < 3 * error:
+        system = {k: v for k, v in system.items() if k != "outer_companion"}  # no slope to read
     known = {k for k in _KNOWN_PARTS if k in system and (k == "sentences" or _by_name(system[k]))}
     blocks += _blocks({k: v for k, v in system.items() if k not in known}, "", 0)
     return tuple(blocks)
@@ -94,10 +98,10 @@ def _is_list(value: Any) -> bool:
 _PLANET_COLUMNS = (
     ("m sin i (M Jup)", ("m_sin_i_mjup",)),
     ("a (au)", ("semi_major_axis_au",)),
-    ("true mass, median", ("true_mass", "isotropic", "median_mjup")),
-    ("5 %", ("true_mass", "isotropic", "q05_mjup")),
-    ("95 %", ("true_mass", "isotropic", "q95_mjup")),
-    ("above 13 M Jup", ("true_mass", "isotropic", "chance_above_13_mjup")),
+    ("true mass (M Jup), random orientation: median", ("true_mass", "isotropic", "median_mjup")),
+    ("5th percentile", ("true_mass", "isotropic", "q05_mjup")),
+    ("95th percentile", ("true_mass", "isotropic", "q95_mjup")),
+    ("chance to be above 13 M Jup", ("true_mass", "isotropic", "chance_above_13_mjup")),
     ("transit probability", ("transit", "probability")),
     ("next transit (BJD)", ("transit", "next_bjd_d")),
     ("± (d)", ("transit", "next_err_d")),
@@ -119,9 +123,16 @@ def _planets(planets: Any) -> list[Block]:
         return []
     # one quantity a line: a system has few planets and many numbers
     rows = tuple(
-        (label, *(_text(nested(p, *path)) for p in shown.values())) for label, path in columns
+        (label, *(_companion_cell(label, nested(p, *path)) for p in shown.values()))
+        for label, path in columns
     )
     return [Block("Companions", 1, head=("if planetary", *map(str, shown)), rows=rows)]
+
+
+def _companion_cell(label: str, value: Any) -> str:
+    if not label.startswith("chance") or not _is_number(value):
+        return _text(value)
+    return "less than 0.1 %" if value < 0.001 else f"{100 * float(value):.2g} %"
 
 
 def _stability(stability: Any) -> list[Block]:

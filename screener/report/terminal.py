@@ -12,8 +12,9 @@ from rich.table import Table
 from rich.text import Text
 
 from screener.core import Grade, SignalVerdict, Verdict
+from screener.report.reasons import deciding_findings
 from screener.report.style import GRADE_SYMBOL
-from screener.report.words import chance, compact, deciding_findings, number, odds, uncertain
+from screener.report.words import chance, compact, number, polished, short_odds, uncertain
 
 __all__ = ["print_summary"]
 
@@ -104,7 +105,7 @@ def _table(verdict: Verdict, text: _Maker) -> Table:
             text(compact(orbit.eccentricity, 2)),
             text(chance(item.signal.false_alarm_probability)),
             text(f"{GRADE_SYMBOL[item.grade]} {item.grade.value}", _STYLE[item.grade]),
-            text(_short_odds(item.score)),
+            text(short_odds(item.score).replace(" : ", ":")),
         )
     return table
 
@@ -113,23 +114,15 @@ def _tight(value: float, error: float | None, digits: int) -> str:
     return uncertain(value, error, digits).replace(" ± ", "±")
 
 
-def _short_odds(score: float) -> str:
-    """As a ratio: "300:1" for a planet, "1:200" against one."""
-    words = odds(score).replace("more than ", ">").replace("about ", "")
-    ratio, _, _ = words.partition(" to 1")
-    if ratio == words:
-        return words.replace(" odds", "")
-    return f"{ratio}:1" if score > 0 else f"1:{ratio}"
-
-
 def _why(item: SignalVerdict) -> str:
     deciding = deciding_findings(item, 1)
-    reason = deciding[0].sentence.replace("+-", "±") if deciding else "No test had anything to say."
+    reason = polished(deciding[0].sentence) if deciding else "No test had anything to say."
     return f"{reason} Next: {item.next_step}" if item.next_step else reason
 
 
 _PLAIN = {
     "●": "*", "◐": "?", "✱": "x", "±": "+-", "−": "-", "×": "x", "–": "-", "⁻": "-", "½": "1/2",
+    "\u00a0": " ", "“": '"', "”": '"',
     **{sign: str(digit) for digit, sign in enumerate("⁰¹²³⁴⁵⁶⁷⁸⁹")},
 }  # fmt: skip
 

@@ -6,41 +6,20 @@ markup: names come from tables of strangers and are escaped by whoever writes th
 
 from __future__ import annotations
 
-import math
 import shlex
 from dataclasses import dataclass
 
-from screener.core import (
-    Finding,
-    Grade,
-    Outcome,
-    RuleEffect,
-    Signal,
-    SignalVerdict,
-    Verdict,
-)
+from screener.core import Signal, Verdict
 from screener.core.references import Reference, bibtex, cited
-from screener.report.style import (
-    GRADE_COLOUR,
-    GRADE_SYMBOL,
-    OUTCOME_COLOUR,
-    OUTCOME_SYMBOL,
+from screener.report.signal_view import (
+    FindingView,
+    RuleView,
+    SignalView,
+    null_findings,
+    signal_view,
 )
 from screener.report.system_view import Block, system_blocks
-from screener.report.words import (
-    MISSING,
-    amplitude,
-    chance,
-    compact,
-    deciding_findings,
-    effect_text,
-    grade_sentence,
-    number,
-    odds,
-    period,
-    title_of,
-    uncertain,
-)
+from screener.report.words import amplitude, headline, number, period, uncertain
 
 __all__ = [
     "DISCLAIMER",
@@ -62,54 +41,6 @@ ALWAYS_USED = ("astropy2022", "harris2020", "virtanen2020", "hunter2007")
 
 
 @dataclass(frozen=True)
-class FindingView:
-    """A finding as it is shown."""
-
-    test: str
-    outcome: str
-    symbol: str
-    colour: str
-    sentence: str
-    statistic: str
-    p_value: str
-    power: str
-    details: str
-
-
-@dataclass(frozen=True)
-class RuleView:
-    """A rule that fired; ``weight`` is None for vetoes and caps."""
-
-    rule: str
-    sentence: str
-    effect: str
-    weight: float | None
-    findings: str
-    without: str
-    decided: bool
-
-
-@dataclass(frozen=True)
-class SignalView:
-    """A graded signal."""
-
-    id: str
-    grade: str
-    symbol: str
-    colour: str
-    sentence: str
-    facts: tuple[tuple[str, str], ...]
-    row: tuple[str, ...]
-    deciding: tuple[FindingView, ...]
-    findings: tuple[FindingView, ...]
-    rules: tuple[RuleView, ...]
-    largest_weight: float
-    score: str
-    next_step: str
-    would_change: str
-
-
-@dataclass(frozen=True)
 class DossierView:
     """Everything a dossier says."""
 
@@ -122,7 +53,9 @@ class DossierView:
     known: tuple[tuple[str, ...], ...]
     rotation: tuple[tuple[str, str], ...]
     rotation_sentence: str
+    models_head: tuple[str, ...]
     models: tuple[tuple[str, ...], ...]
+    models_note: str
     null: tuple[tuple[str, FindingView], ...]
     system: tuple[Block, ...]
     data: tuple[str, ...]
@@ -137,19 +70,22 @@ class DossierView:
 def build_view(verdict: Verdict) -> DossierView:
     """The view of a verdict; needs nothing else and cannot fail on missing values."""
     keys = _citations(verdict)
+    models_head, models, models_note = _models(verdict)
     return DossierView(
         star=verdict.star.name,
         version=verdict.version,
-        headline=_headline(verdict),
+        headline=headline(verdict),
         facts=_star_facts(verdict),
-        signals=tuple(_signal_view(item) for item in verdict.signals),
+        signals=tuple(signal_view(item) for item in verdict.signals),
         cautions=verdict.cautions,
         known=tuple(_known_row(s) for s in verdict.known_planets),
         rotation=tuple(
             (s.source, f"{uncertain(s.period, s.period_err)} d") for s in verdict.rotation.sources
         ),
         rotation_sentence=_rotation_sentence(verdict),
-        models=_model_rows(verdict),
+        models_head=models_head,
+        models=models,
+        models_note=models_note,
         null=null_findings(verdict),
         system=system_blocks(verdict.system),
         data=_data_sentences(verdict),
@@ -168,19 +104,6 @@ def build_view(verdict: Verdict) -> DossierView:
         provenance=_provenance(verdict),
         command=command_line(verdict),
     )
-
-
-def _headline(verdict: Verdict) -> str:
-    counts = {grade: sum(s.grade is grade for s in verdict.signals) for grade in Grade}
-    total = len(verdict.signals)
-    if total == 0:
-        return (
-            f"No significant period was found in {verdict.n_obs} velocities over "
-            f"{number(verdict.baseline, 3)} days."
-        )
-    parts = [f"{count} {grade.value}" for grade, count in counts.items() if count]
-    noun = "period was" if total == 1 else "periods were"
-    return f"{total} significant {noun} found: {', '.join(parts)}."
 
 
 def _star_facts(verdict: Verdict) -> tuple[tuple[str, str], ...]:
@@ -215,82 +138,6 @@ def _unit(value: float | None, error: float | None, unit: str) -> str | None:
     return None if value is None else f"{uncertain(value, error)} {unit}".strip()
 
 
-def _finding_view(finding: Finding) -> FindingView:
-    details = []
-    for name, value in finding.parameters.items():
-        if isinstance(value, bool):
-            details.append(f"{name.replace('_', ' ')}: {'yes' if value else 'no'}")
-        elif isinstance(value, float) and not math.isfinite(value):
-            continue
-        elif isinstance(value, int | float):
-            details.append(f"{name.replace('_', ' ')}: {compact(value)}")
-        elif value is not None:
-            details.append(f"{name.replace('_', ' ')}: {value}")
-    return FindingView(
-        test=title_of(finding.test),
-        outcome=finding.outcome.value,
-        symbol=OUTCOME_SYMBOL[finding.outcome],
-        colour=OUTCOME_COLOUR[finding.outcome],
-        sentence=finding.sentence.replace("+-", "±"),
-        statistic=compact(finding.statistic),
-        p_value=chance(finding.p_value),
-        power=MISSING if finding.power is None else f"{100 * finding.power:.0f}\u00a0%",
-        details="; ".join(details),
-    )
-
-
-def _rule_view(effect: RuleEffect, item: SignalVerdict) -> RuleView:
-    weighs = effect.effect == "weight" and isinstance(effect.value, int | float)
-    changed = effect.grade_without is not None and effect.grade_without is not item.grade
-    return RuleView(
-        rule=effect.rule,
-        sentence=effect.sentence,
-        effect=effect_text(effect),
-        weight=float(effect.value) if weighs else None,
-        findings=", ".join(effect.findings),
-        without=str(effect.grade_without.value) if changed and effect.grade_without else "the same",
-        decided=effect.rule in item.deciding_rules,
-    )
-
-
-def _signal_view(item: SignalVerdict) -> SignalView:
-    signal, orbit = item.signal, item.signal.orbit
-    rules = tuple(_rule_view(effect, item) for effect in item.trace)
-    order = list(Outcome)
-    speaking = sorted(item.findings, key=lambda f: order.index(f.outcome))
-    facts = (
-        ("period", period(signal)),
-        ("semi-amplitude", amplitude(signal)),
-        ("eccentricity", uncertain(orbit.eccentricity, orbit.eccentricity_err, 2)),
-        ("false-alarm probability", chance(signal.false_alarm_probability)),
-        ("found by", ", ".join(signal.found_by)),
-        ("gain over white noise", f"{number(signal.white_gain, 3)} in ln L"),
-        ("gain over the activity model", f"{number(signal.activity_gain, 3)} in ln L"),
-        ("score", f"{number(item.score, 2)} in ln odds, {odds(item.score)}"),
-    )
-    return SignalView(
-        id=signal.id,
-        grade=item.grade.value,
-        symbol=GRADE_SYMBOL[item.grade],
-        colour=GRADE_COLOUR[item.grade],
-        sentence=grade_sentence(item),
-        facts=facts,
-        row=(
-            signal.id,
-            *(value for _, value in facts[:4]),
-            f"{GRADE_SYMBOL[item.grade]} {item.grade.value}",
-            odds(item.score),
-        ),
-        deciding=tuple(_finding_view(f) for f in deciding_findings(item)),
-        findings=tuple(_finding_view(f) for f in speaking),
-        rules=rules,
-        largest_weight=max((abs(r.weight) for r in rules if r.weight is not None), default=1.0),
-        score=number(item.score, 2),
-        next_step=item.next_step,
-        would_change=item.would_change,
-    )
-
-
 def _known_row(signal: Signal) -> tuple[str, ...]:
     eccentricity = uncertain(signal.orbit.eccentricity, signal.orbit.eccentricity_err, 2)
     return (signal.id, period(signal), amplitude(signal), eccentricity)
@@ -307,35 +154,36 @@ def _rotation_sentence(verdict: Verdict) -> str:
     return f"Combined from {count} source{'s' if count > 1 else ''}: {value}."
 
 
-def _model_rows(verdict: Verdict) -> tuple[tuple[str, ...], ...]:
+def _models(verdict: Verdict) -> tuple[tuple[str, ...], tuple[tuple[str, ...], ...], str]:
+    """Head, rows and a note; evidences only where there are any."""
     evidences = [m.log_evidence for m in verdict.models if m.log_evidence is not None]
     best = max(evidences, default=None)
     rows = []
     for model in verdict.models:
         known = model.log_evidence is not None and best is not None
         gap = model.log_evidence - best if known else None  # type: ignore[operator]
+        weighed = (number(model.log_evidence, 5), number(gap, 3)) if len(evidences) > 1 else ()
         rows.append(
             (
                 model.name,
                 str(model.n_planets),
                 str(model.n_parameters),
                 number(model.log_likelihood, 5),
-                number(model.log_evidence, 5),
-                number(gap, 3),
+                *weighed,
                 "yes" if model.converged else "no",
             )
         )
-    return tuple(rows)
-
-
-def null_findings(verdict: Verdict) -> tuple[tuple[str, FindingView], ...]:
-    """For each signal the findings that come from draws of the star's own activity."""
-    return tuple(
-        (item.signal.id, _finding_view(finding))
-        for item in verdict.signals
-        for finding in item.findings
-        if "null" in finding.test.lower()
-    )
+    columns = ("ln evidence", "less the best") if len(evidences) > 1 else ()
+    head = ("hypothesis", "planets", "parameters", "ln L", *columns, "converged")
+    note = "A fit that did not converge counts for nothing."
+    if columns:
+        note = f"Differences in ln evidence of 5 or more are commonly called strong. {note}"
+    if verdict.indicators:
+        note += (
+            " Models with activity describe velocities and indicators together, so their ln L "
+            "compares with each other and not with that of white noise."
+        )
+    return head, tuple(rows), note
 
 
 def _data_sentences(verdict: Verdict) -> tuple[str, ...]:
@@ -351,9 +199,11 @@ def _data_sentences(verdict: Verdict) -> tuple[str, ...]:
         result.append(f"{notes.n_exposures} exposures were used one by one; nothing was binned.")
     count = len(notes.outliers)
     if count:
+        columns = [o.column for o in notes.outliers]
+        listing = ", ".join(f"{columns.count(c)} in {c}" for c in dict.fromkeys(columns))
         result.append(
             f"{count} value{' was' if count == 1 else 's were'} marked as outlier and left out "
-            "of the fits."
+            f"of the fits: {listing}."
         )
     else:
         result.append("No value was marked as an outlier.")

@@ -3,20 +3,24 @@
 from __future__ import annotations
 
 import math
+import re
 
-from screener.core import Finding, Grade, Outcome, RuleEffect, Signal, SignalVerdict
+from screener.core import Grade, RuleEffect, Signal, Verdict
+from screener.core.wording import TESTS
 
 __all__ = [
     "amplitude",
     "chance",
     "compact",
-    "deciding_findings",
     "effect_text",
-    "grade_sentence",
+    "headline",
     "number",
     "odds",
     "period",
+    "polished",
+    "short_odds",
     "signal_name",
+    "test_title",
     "title_of",
     "uncertain",
 ]
@@ -98,30 +102,69 @@ def signal_name(signal: Signal) -> str:
     return f"{signal.id} ({number(signal.orbit.period, 4)} d)"
 
 
-_GRADE_PHRASE = {
-    Grade.PLANETARY: "behaves like a planet",
-    Grade.AMBIGUOUS: "may be a planet or the star's own activity; these data do not decide",
-    Grade.LIKELY_STELLAR: "is most likely made by the star",
+_COUNTS = ("no", "one", "two", "three", "four", "five", "six", "seven", "eight", "nine")
+_VERBS = {
+    Grade.PLANETARY: ("behaves like a planet", "behave like planets"),
+    Grade.AMBIGUOUS: ("cannot be decided with these data",) * 2,
+    Grade.LIKELY_STELLAR: ("is most likely made by the star", "are most likely made by the star"),
 }
 
 
-def grade_sentence(item: SignalVerdict) -> str:
-    """One sentence that says which signal, how large, and what it is taken for.
+def headline(verdict: Verdict) -> str:
+    """The result in a sentence: "One signal behaves like a planet (S1, 5.387 d)."."""
+    total = len(verdict.signals)
+    if total == 0:
+        return (
+            f"No significant period was found in {verdict.n_obs} velocities over "
+            f"{number(verdict.baseline, 3)} days."
+        )
+    parts: list[str] = []
+    for grade in Grade:
+        group = [item.signal for item in verdict.signals if item.grade is grade]
+        if not group:
+            continue
+        count = _COUNTS[len(group)] if len(group) < len(_COUNTS) else str(len(group))
+        noun = "" if parts else " signal" if len(group) == 1 else " signals"
+        named = ", ".join(
+            f"{s.id}, {number(s.orbit.period, 4)} d"
+            if len(group) == 1
+            else f"{s.id} at {number(s.orbit.period, 4)} d"
+            for s in group[:4]
+        )
+        more = ", ..." if len(group) > 4 else ""
+        parts.append(f"{count}{noun} {_VERBS[grade][len(group) > 1]} ({named}{more})")
+    text = "; ".join(parts) + "."
+    return text[:1].upper() + text[1:]
 
-    Where a veto or cap binds against the odds, a second one says which.
-    """
-    signal = item.signal
-    sentence = (
-        f"The {number(signal.orbit.period, 4)} d signal of "
-        f"{number(signal.orbit.semi_amplitude, 3)} m/s {_GRADE_PHRASE[item.grade]} "
-        f"({odds(item.score)})."
+
+def short_odds(score: float) -> str:
+    """Odds of planet to star: "900 : 1", "1 : 600"."""
+    words = odds(score).replace("more than ", ">").replace("about ", "")
+    ratio, _, side = words.partition(" to 1 ")
+    if not side:
+        return words.replace(" odds", "")
+    return f"{ratio} : 1" if side.startswith("for") else f"1 : {ratio}"
+
+
+def test_title(test: str) -> str:
+    """What a line of evidence is called for a reader."""
+    return TESTS[test].title if test in TESTS else title_of(test)
+
+
+test_title.__test__ = False  # type: ignore[attr-defined]
+
+_EXPONENT = re.compile(r"(?<![\w.])(-?\d(?:\.\d+)?)e([+-]\d+)\b")
+_MINUS = re.compile(r"(?<=[\s(±=,;])-(?=\d)")
+_PER_CENT = re.compile(r"(\d)%")
+
+
+def polished(sentence: str) -> str:
+    """A sentence of a finding with signs and powers of ten as in print."""
+    text = sentence.replace("+-", "±")
+    text = _EXPONENT.sub(
+        lambda m: f"{m.group(1)}×10{str(int(m.group(2))).translate(_SUPERSCRIPT)}", text
     )
-    # a cap or veto holds down what the odds would lift, a floor holds up what they would sink
-    kinds = ("cap", "veto") if item.score > 0 else ("floor",)
-    binding = [e for e in item.trace if e.effect in kinds and e.value == item.grade]
-    if binding and item.grade is not Grade.PLANETARY:
-        sentence += f" A rule binds whatever the odds: {binding[0].sentence}"
-    return sentence
+    return _PER_CENT.sub("\\1\u00a0%", _MINUS.sub("−", text))
 
 
 def title_of(identifier: str) -> str:
@@ -141,36 +184,3 @@ def effect_text(effect: RuleEffect) -> str:
         if effect.effect in bounds
         else f"{effect.effect}: {value}"
     )
-
-
-def deciding_findings(item: SignalVerdict, count: int = 3) -> tuple[Finding, ...]:
-    """The findings that decided a grade, weightiest first.
-
-    Vetoes and caps come before weights, larger weights before smaller ones, rules named as
-    deciding before the others. Where the rules leave room, findings that speak for a side follow,
-    the least probable ones first. Findings that say nothing never appear.
-    """
-    chosen: list[Finding] = []
-    for effect in sorted(item.trace, key=lambda e: _rank(e, item.deciding_rules)):
-        for text in effect.findings:
-            found = _finding_named(text, item.findings)
-            if found is not None and found not in chosen:
-                chosen.append(found)
-    speaking = (Outcome.SUPPORTS_PLANET, Outcome.SUPPORTS_STAR)
-    rest = [f for f in item.findings if f.outcome in speaking and f not in chosen]
-    rest.sort(key=lambda f: f.p_value if f.p_value is not None else 1.0)
-    silent = (Outcome.NOT_APPLICABLE, Outcome.FAILED)
-    return tuple([f for f in [*chosen, *rest] if f.outcome not in silent][:count])
-
-
-def _rank(effect: RuleEffect, deciding: tuple[str, ...]) -> tuple[bool, bool, float]:
-    size = abs(effect.value) if isinstance(effect.value, int | float) else 0.0
-    return (effect.rule not in deciding, effect.effect == "weight", -size)
-
-
-def _finding_named(text: str, findings: tuple[Finding, ...]) -> Finding | None:
-    """The finding that "test.field = number" speaks of; the longest test name wins."""
-    fitting = [
-        f for f in findings if text == f.test or text.startswith((f"{f.test}.", f"{f.test} "))
-    ]
-    return max(fitting, key=lambda f: len(f.test), default=None)

@@ -315,21 +315,32 @@ def _sentences(result: Mapping[str, Any]) -> list[str]:
             f"{name}: m sin i = {planet['m_sin_i_mjup']:.3g} Jupiter masses at "
             f"{planet['semi_major_axis_au']:.3g} au; true mass {mass['median_mjup']:.3g} "
             f"({mass['q05_mjup']:.3g} to {mass['q95_mjup']:.3g}) for random orientations, above 13 "
-            f"with a chance of {100 * mass['chance_above_13_mjup']:.2g} %."
+            f"with a chance of {_small(mass['chance_above_13_mjup'])}."
         )
     for pair in result["stability"]["pairs"]:
         lines.append(_pair_sentence(pair))
-    outer = result["outer_companion"]
-    if outer is not None and outer["mass_min_mjup"] > 0:
-        lines.append(
-            f"The slope asks for an outer companion of at least {outer['mass_min_mjup']:.2g} "
-            f"Jupiter masses beyond {outer['distance_min_au']:.2g} au."
-        )
+    if result["outer_companion"] is not None:
+        lines.append(_slope_sentence(result["outer_companion"]))
     lines += [f"{name}: {a['sentence']}" for name, a in result["alternatives"].items()]
     lines += [f"{name}: {p['sentence']}" for name, p in result["nights"].items() if p]
     if result["sensitivity"] is not None:
         lines.append(result["sensitivity"]["sentence"])
     return lines
+
+
+def _small(chance: float) -> str:
+    """A share of a thousand draws or so in per cent; none of them is less than a thousandth."""
+    return f"{100 * chance:.2g} %" if chance > 0 else "less than 0.1 %"
+
+
+def _slope_sentence(outer: Mapping[str, Any]) -> str:
+    mass, error = outer["mass_min_mjup"], outer["mass_min_err_mjup"]
+    if error is not None and mass < 3 * error:
+        return "No slope beyond three times its error: no sign of a body far out."
+    return (
+        f"The slope asks for an outer companion of at least {mass:.2g} Jupiter masses beyond "
+        f"{outer['distance_min_au']:.2g} au."
+    )
 
 
 def _pair_sentence(pair: Mapping[str, Any]) -> str:

@@ -9,22 +9,24 @@ from pathlib import Path
 
 import pytest
 
-from screener.core import Grade, Screening
+from screener.core import Grade, Outcome, Screening
 from screener.report.dossier import dossier_html, write_dossier
 from screener.report.figures import figure_bytes, figure_specs
 from screener.report.pdf import dossier_pdf
+from screener.report.reasons import deciding_findings, grade_sentence
 from screener.report.restore import load_verdict
+from screener.report.signal_view import signal_view
 from screener.report.system_view import label_of, system_blocks
 from screener.report.verdict_json import write_verdict
 from screener.report.view import DISCLAIMER, build_view, command_line
 from screener.report.words import (
     chance,
     compact,
-    deciding_findings,
     effect_text,
-    grade_sentence,
     number,
     odds,
+    polished,
+    short_odds,
     uncertain,
 )
 from tests.unit.report_sample import sample
@@ -121,7 +123,7 @@ def test_what_a_reader_must_find(page: _Page):
     words = _words(page)
     for needed in (
         "Tern 14",
-        "2 significant periods were found: 1 planetary, 1 likely stellar.",
+        "One signal behaves like a planet (S1, 37.42 d); one is most likely made by the star (S2, ",
         "What decided it",
         "Amplitude and phase are the same in all four seasons.",
         "Ten more nights spread over one orbit would pin down the eccentricity.",
@@ -267,6 +269,32 @@ def test_deciding_findings_follow_the_rules():
     assert deciding_findings(replace(planet, findings=())) == ()
 
 
+def test_rules_that_moved_nothing_decide_nothing():
+    planet = sample().verdict.signals[0]
+    first = planet.trace[0]
+    seen = ("own_null.p_value = 0.5",)
+    idle = replace(first, rule="idle", effect="floor", value="ambiguous", findings=seen)
+    nought = replace(first, rule="nought", effect="weight", value=0.0, findings=seen)
+    bare = replace(planet, trace=(idle, nought), deciding_rules=())
+    without = replace(planet, trace=(), deciding_rules=())
+    assert deciding_findings(bare) == deciding_findings(without)
+    view = signal_view(bare)
+    assert [r.rule for r in view.rules] == []
+    assert [r.rule for r in view.idle_rules] == ["idle", "nought"]
+    # a limit without which the grade would be another is no bystander
+    held = replace(idle, grade_without=Grade.AMBIGUOUS)
+    assert signal_view(replace(bare, trace=(held,))).rules[0].without == "ambiguous"
+
+
+def test_a_stellar_grade_without_a_witness_says_so():
+    star = sample().verdict.signals[1]
+    mute = tuple(replace(f, outcome=Outcome.INCONCLUSIVE) for f in star.findings)
+    prior = replace(star.trace[0], rule="prior", effect="weight", value=-4.6, findings=())
+    silent = replace(star, findings=mute, trace=(prior,), score=-1.0)
+    assert "before any evidence (about 100 to 1)" in grade_sentence(silent)
+    assert "before any evidence" not in grade_sentence(replace(silent, findings=star.findings))
+
+
 def test_a_binding_rule_is_named_in_the_sentence():
     planet = sample().verdict.signals[0]
     cap = replace(
@@ -306,6 +334,15 @@ def test_a_binding_rule_is_named_in_the_sentence():
         (odds(0.1), "about even odds"),
         (odds(99.0), "more than 1000 to 1 for a planet"),
         (odds(float("nan")), "odds unknown"),
+        (short_odds(6.8), "900 : 1"),
+        (short_odds(-0.84), "1 : 2.3"),
+        (short_odds(-9.0), "1 : >1000"),
+        (short_odds(0.1), "even"),
+        (
+            polished("r = -0.09 (p = 1.3e-06), K = 2.0 +- 0.1, 97%"),
+            "r = −0.09 (p = 1.3×10⁻⁶), K = 2.0 ± 0.1, 97\u00a0%",
+        ),
+        (polished("HD-1 from 2021-03-27, e-mail, CARM-2"), "HD-1 from 2021-03-27, e-mail, CARM-2"),
         (label_of("m_sin_i_mjup"), "m sin i (M Jup)"),
         (label_of("k_m_s"), "k (m/s)"),
     ],

@@ -11,6 +11,7 @@ import scipy.stats
 
 from screener.core import Fold, Orbit, PeriodogramTrace, Screening
 from screener.models.kepler import orbit_velocity, time_of_conjunction
+from screener.report.axes import broken
 from screener.report.figures import figure_bytes, figure_specs, inline_svg, write_figures
 from screener.report.fold import block_amplitudes, folded, orbit_at, phase_bins
 from screener.report.limits import limit_curve
@@ -198,3 +199,12 @@ def test_names_with_dollar_signs_and_foreign_scripts():
         series, _, fold, *_ = figure_specs(screening)
         for spec in (series, fold):
             figure_bytes(spec, ("png", "svg"))
+
+
+def test_no_line_is_drawn_across_a_gap():
+    grid = np.array([0.0, 0.5, 1.0, 60.0, 60.5, 61.0])
+    shown, curve = broken(grid, grid**2)
+    assert np.isnan(shown[3]) and np.isnan(curve[3])
+    assert shown.size == grid.size + 1
+    assert np.array_equal(shown[np.isfinite(shown)], grid)
+    assert broken(grid[:1], grid[:1])[0].size == 1
