@@ -14,13 +14,13 @@ import jinja2
 from markupsafe import Markup
 
 from screener.core import InputFault
+from screener.core.described_table import Columns, described_table, harmless
 from screener.ledger.changes import Standing
 from screener.report.files import write_text
 
 __all__ = ["FORMATS", "export", "printable"]
 
-# name -> (kind, unit, meaning)
-_COLUMNS: dict[str, tuple[str, str | None, str]] = {
+_COLUMNS: Columns = {
     "entry": ("int", None, "number in the ledger"),
     "time_utc": ("str", None, "when it was decided, UTC"),
     "star": ("str", None, "the star's folder"),
@@ -46,7 +46,6 @@ _COLUMNS: dict[str, tuple[str, str | None, str]] = {
     "table_sha256": ("str", None, "hash of the table it was made from"),
     "entry_sha256": ("str", None, "hash of the entry; pins it and all before it"),
 }
-_DANGEROUS = ("=", "+", "-", "@")
 
 
 def printable(text: str, lines: bool = False) -> str:
@@ -93,29 +92,12 @@ def _csv(standings: Sequence[Standing], _title: str) -> str:
 def _cell(value: Any, kind: str) -> Any:
     if value is None or kind != "str":
         return "" if value is None else value
-    text = printable(str(value)).strip()
-    return f"'{text}" if text.startswith(_DANGEROUS) else text
+    return harmless(printable(str(value)).strip())
 
 
 def _ecsv(standings: Sequence[Standing], title: str) -> str:
-    import numpy as np
-    from astropy.table import MaskedColumn, Table
-
-    rows = [_row(standing) for standing in standings]
-    table = Table(masked=True, meta={"title": printable(title)})
-    types: dict[str, Any] = {"int": np.int64, "float": np.float64}
-    for name, (kind, unit, meaning) in _COLUMNS.items():
-        values = [row[name] for row in rows]
-        if kind == "str":
-            texts = [printable(str(v)) if v is not None else "" for v in values]
-            column = MaskedColumn(np.array(texts, dtype=str) if texts else np.array([], "U1"))
-        else:
-            filled = [0 if v is None else v for v in values]
-            column = MaskedColumn(
-                np.array(filled, dtype=types[kind]), mask=[v is None for v in values]
-            )
-        column.name, column.description, column.unit = name, meaning, unit
-        table[name] = column
+    table = described_table(_COLUMNS, [_row(standing) for standing in standings], printable)
+    table.meta["title"] = printable(title)
     stream = io.StringIO()
     table.write(stream, format="ascii.ecsv")
     return stream.getvalue()

@@ -13,39 +13,26 @@ from __future__ import annotations
 
 import hashlib
 import math
-from dataclasses import dataclass, replace
+from dataclasses import replace
 from pathlib import Path
 
 import click
 import numpy as np
 
 from screener.core import Array, InputFault, ScreenerError
-from screener.rules.fitting import MIN_ACTIVE, Design, Fit, fit_weights, fold_of_stars
+from screener.rules.fitting import MIN_ACTIVE, Design, fit_weights, fold_of_stars
 from screener.rules.performance import STRONG_SNR, limits_of, measure
 from screener.rules.population import BoolArray, IntArray, Population, read_population
 from screener.rules.reading import DEFAULT_FILE, load_rules
-from screener.rules.report import markdown, plain_table
+from screener.rules.report import Calibration, markdown, plain_table
 from screener.rules.types import Rule, RuleSet, Thresholds
 
-__all__ = ["Calibration", "calibrate", "choose_thresholds", "main", "weights_text"]
+__all__ = ["calibrate", "choose_thresholds", "main", "weights_text"]
 
 # a signal is not called planetary below odds of about 4:1, nor stellar above even odds, however
 # few the stars that would forbid it (common practice, no source)
 LEAST_PLANETARY, MOST_STELLAR = 1.4, 0.0
 LEAST_GAP = 0.1
-
-
-@dataclass(frozen=True, eq=False)
-class Calibration:
-    """The fitted rules and what they were fitted with."""
-
-    rules: RuleSet
-    fit: Fit
-    fitted: tuple[str, ...]
-    kept: tuple[str, ...]  # marked as fitted, but too seldom seen: their weight stays
-    trained: Population
-    held_out: Population
-    notes: tuple[str, ...]
 
 
 def _up(value: float) -> float:

@@ -1,20 +1,32 @@
-"""The performance of calibrated rules as a Markdown page."""
+"""Calibrated rules, and their performance as a Markdown page."""
 
 from __future__ import annotations
 
 import math
 from collections.abc import Sequence
-from typing import TYPE_CHECKING
+from dataclasses import dataclass
 
 import numpy as np
 
+from screener.rules.fitting import Fit
 from screener.rules.performance import BINS, measure, reliability, single_features
+from screener.rules.population import Population
 from screener.rules.types import RuleSet
 
-if TYPE_CHECKING:
-    from screener.rules.calibrate import Calibration
+__all__ = ["Calibration", "markdown", "plain_table"]
 
-__all__ = ["markdown", "plain_table"]
+
+@dataclass(frozen=True, eq=False)
+class Calibration:
+    """The fitted rules and what they were fitted with."""
+
+    rules: RuleSet
+    fit: Fit
+    fitted: tuple[str, ...]
+    kept: tuple[str, ...]  # marked as fitted, but too seldom seen: their weight stays
+    trained: Population
+    held_out: Population
+    notes: tuple[str, ...]
 
 
 def _table(head: Sequence[str], rows: Sequence[Sequence[str]]) -> list[str]:

@@ -6,6 +6,7 @@ from pathlib import Path
 from typing import Any
 
 from screener.core import InputFault
+from screener.core.described_table import Columns, described_table, harmless
 from screener.store.database import Store
 from screener.store.reading import current_run, ranked
 
@@ -21,8 +22,7 @@ FORMATS = {
     ".xml": "votable",
 }
 
-# name -> (kind, unit, meaning)
-COLUMNS: dict[str, tuple[str, str | None, str]] = {
+COLUMNS: Columns = {
     "rank": ("int", None, "1 for the most planet-like signal"),
     "star": ("str", None, "the table's file name without its ending"),
     "star_name": ("str", None, "name of the star"),
@@ -45,8 +45,6 @@ COLUMNS: dict[str, tuple[str, str | None, str]] = {
     "seconds": ("float", "s", "time taken by the star"),
 }
 
-_DANGEROUS = ("=", "+", "-", "@", "\t", "\r")
-
 
 def ranked_table(store: Store, *, plain_text: bool = False, ascii_only: bool = False) -> Any:
     """The ranked table as a masked astropy table with units and descriptions.
@@ -63,25 +61,11 @@ def ranked_table(store: Store, *, plain_text: bool = False, ascii_only: bool = F
     -------
     astropy.table.Table
     """
-    import numpy as np
-    from astropy.table import MaskedColumn, Table
 
-    rows = ranked(store)
-    kinds: dict[str, Any] = {"int": np.int64, "float": np.float64}
-    table = Table(masked=True)
-    for name, (kind, unit, meaning) in COLUMNS.items():
-        values = [row[name] for row in rows]
-        mask = [value is None for value in values]
-        if kind == "str":
-            text = [_text(value, plain_text, ascii_only) for value in values]
-            column = MaskedColumn(np.array(text, dtype=str) if text else np.array([], dtype="U1"))
-        else:
-            filled = [0 if value is None else value for value in values]
-            column = MaskedColumn(np.array(filled, dtype=kinds[kind]), mask=mask)
-        column.name, column.description = name, meaning
-        if unit is not None:
-            column.unit = unit
-        table[name] = column
+    def text(value: str) -> str:
+        return _text(value, plain_text, ascii_only)
+
+    table = described_table(COLUMNS, ranked(store), text)
     run = current_run(store)
     for key in ("version", "rules", "seed", "depth"):
         if key in run:
@@ -89,14 +73,11 @@ def ranked_table(store: Store, *, plain_text: bool = False, ascii_only: bool = F
     return table
 
 
-def _text(value: str | None, harmless: bool, ascii_only: bool) -> str:
-    text = "" if value is None else str(value)
+def _text(text: str, plain: bool, ascii_only: bool) -> str:
     text = "".join(c if c.isprintable() else " " for c in text)
     if ascii_only:
         text = text.encode("ascii", "backslashreplace").decode("ascii")
-    if harmless and text.lstrip(" ").startswith(_DANGEROUS):
-        text = "'" + text
-    return text
+    return harmless(text) if plain else text
 
 
 def export_ranked(store: Store, path: Path) -> None:
