@@ -77,6 +77,13 @@ def _own(name: str) -> Markup:
     return Markup(text)  # a file of ours, no word of the user's
 
 
+def _first_rules(text: str, count: int = 3) -> str:
+    """The first of the rules that decided; a strong signal has many."""
+    names = text.split(", ")
+    more = len(names) - count
+    return text if more <= 0 else f"{', '.join(names[:count])} and {more} more"
+
+
 def _row(
     row: dict[str, Any], folder: RunFolder, pictures: dict[tuple[str, str], str]
 ) -> dict[str, Any]:
@@ -95,7 +102,7 @@ def _row(
         "amplitude_err": _number(row["k_err_m_s"], 2),
         "score": "" if row["score"] is None else f"{row['score']:+.1f}".replace("-", "−"),
         "rotation": _number(row["rotation_period_d"], 3),
-        "rules": row["deciding_rules"] or "",
+        "rules": _first_rules(row["deciding_rules"] or ""),
         "seconds": _number(row["seconds"], 3),
         "sort": [
             "" if value is None else repr(value)

@@ -158,6 +158,8 @@ def _print_star(found: list[Standing]) -> None:
 
 
 def _lines(standing: Standing) -> list[str]:
+    from screener.ledger.export import departs, test_named
+
     entry, then = standing.entry, standing.entry.snapshot
     number = "{:.5g}".format
     period, k, score = (
@@ -171,12 +173,14 @@ def _lines(standing: Standing) -> list[str]:
         *(f"     {line}" for line in entry.note.splitlines()),
     ]
     if entry.reason:
-        lines.append(f"     departs from the grade because: {entry.reason}")
+        why = "departs from the grade because" if departs(entry) else "reason"
+        lines.append(f"     {why}: {entry.reason}")
     if entry.weighed_most:
-        lines.append(f"     weighed most: {entry.weighed_most}")
+        lines.append(f"     weighed most: {test_named(entry.weighed_most)}")
     if standing.replaced_by is not None:
         lines.append(f"     replaced by entry {standing.replaced_by}")
     if standing.state != "current":
-        lines.append(f"     {standing.state.upper()}: its verdict is not the present one")
+        told = "the verdict has changed since" if standing.changes else "not the present verdict"
+        lines.append(f"     {standing.state.upper()}: {told}")
         lines += [f"       {change}" for change in standing.changes]
     return lines

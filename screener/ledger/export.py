@@ -15,10 +15,19 @@ from markupsafe import Markup
 
 from screener.core import InputFault
 from screener.core.described_table import Columns, described_table, harmless
+from screener.core.wording import TESTS
 from screener.ledger.changes import Standing
+from screener.ledger.decisions import departs_from_grade
+from screener.ledger.entry import Entry
 from screener.report.files import write_text
 
-__all__ = ["FORMATS", "export", "printable"]
+__all__ = ["FORMATS", "departs", "export", "printable", "test_named"]
+
+_SAID = {
+    "announce": "to be announced",
+    "observe": "to be observed further",
+    "set-aside": "set aside",
+}
 
 _COLUMNS: Columns = {
     "entry": ("int", None, "number in the ledger"),
@@ -29,7 +38,7 @@ _COLUMNS: Columns = {
     "decision": ("str", None, "announce, observe or set-aside"),
     "by": ("str", None, "who decided"),
     "note": ("str", None, "what they say"),
-    "reason": ("str", None, "why the decision departs from the grade"),
+    "reason": ("str", None, "reason given; where it departs from the grade, why"),
     "weighed_most": ("str", None, "the test that weighed most"),
     "state": ("str", None, "current, outdated, verdict gone or verdict unreadable"),
     "changed": ("str", None, "what is not as it was when it was decided"),
@@ -114,8 +123,30 @@ def _environment(escape: bool) -> jinja2.Environment:
         finalize=_finalized,
     )
     environment.filters["md"] = _markdown_escaped
-    environment.filters["num"] = lambda v, n=5: "not known" if v is None else f"{v:.{n}g}"
+    environment.filters["num"] = _number
+    environment.filters["said"] = lambda decision: _SAID.get(decision, decision)
+    environment.filters["test"] = test_named
+    environment.filters["departs"] = departs
     return environment
+
+
+def _number(value: float | None, digits: int = 5) -> str:
+    return "not known" if value is None else f"{value:.{digits}g}".replace("-", "−")
+
+
+def test_named(test: str) -> str:
+    """A test as a reader knows it, with its identifier: "Sampling (sampling)"."""
+    words = TESTS.get(test)
+    return test if words is None else f"{words.title} ({test})"
+
+
+test_named.__test__ = False  # type: ignore[attr-defined]
+
+
+def departs(entry: Entry) -> bool:
+    """Whether a decision departs from the grade that it was taken on."""
+    grade = entry.snapshot.get("grade")
+    return isinstance(grade, str) and departs_from_grade(entry.decision, grade)
 
 
 def _finalized(value: Any) -> Any:
@@ -144,6 +175,7 @@ def _statement(template: str, standings: Sequence[Standing], title: str) -> str:
             now=datetime.now(UTC).strftime("%Y-%m-%d %H:%M UTC"),
             standings=standing,
             n_replaced=len(standings) - len(standing),
+            n_outdated=sum(s.state != "current" for s in standing),
             last=standings[-1].entry if standings else None,
             light=Markup(css_variables(LIGHT)),  # our own colours, no word of the user's
             dark=Markup(css_variables(DARK)),
