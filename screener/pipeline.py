@@ -249,6 +249,8 @@ def _cautions(
         out.append(f"There are only {series.n_nights} nights.")
     if series.baseline < 90:
         out.append(f"The velocities span only {series.baseline:.0f} d.")
+    if portrait.noise.approximation:
+        out.append(portrait.noise.approximation)
     if not all(m.converged for m in portrait.comparisons):
         out.append("A model fit stopped before it converged; its numbers are less certain.")
     if posterior is not None and not posterior["converged"]:

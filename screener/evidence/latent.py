@@ -55,6 +55,8 @@ def latent_activity(result: Fit, scaled: Scaled) -> LatentActivity | None:
     n_values = int(measured.sum())
     if model.kernel is None or not 0 < n_values <= _MOST_VALUES:
         return None
+    if model.data.n_series < data.n_series:  # a long series: the process is not under them all
+        return None
     blocks = model.kernel.blocks(data.lags, parameters[model.slices["kernel"]], True)
     gg, dg, dd = blocks.gg, blocks.dg, blocks.dd
     assert dg is not None and dd is not None

@@ -97,7 +97,7 @@ def prediction_gain(
     for rows in blocks:
         values = []
         for solution in solutions:
-            block = solution.rv_precision[np.ix_(rows, rows)]
+            block = solution.velocity_block(rows)
             weighted = solution.rv_weighted[rows]
             _, log_det = np.linalg.slogdet(block)
             values.append(0.5 * log_det - 0.5 * float(weighted @ np.linalg.solve(block, weighted)))

@@ -64,6 +64,8 @@ class HyperPrior:
             return math.log(centre), self.log_decay_sd, math.log(lower), math.log(upper)
         if name == "shape":
             return self.log_shape, self.log_shape_sd, math.log(0.15), math.log(3.0)
+        if name == "half":
+            return math.log(0.3), 1.0, math.log(0.01), math.log(10.0)
         if name == "mix":
             return 0.0, 1.5, -6.0, 6.0
         raise KeyError(name)
@@ -240,7 +242,7 @@ def _occam(result: Fit) -> float:
     model = result.model
     if not model.orbits:
         return 0.0
-    solution = model.solve(result.parameters)
+    solution = model.solve(result.parameters, velocities=False)
     start = model.data.columns.shape[2]
     covariance = solution.linear_covariance[start:, start:]
     mean, sd = solution.linear_mean[start:], model.column_sd[start:]

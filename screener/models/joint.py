@@ -144,6 +144,11 @@ class JointModel:
         work, orbit_gradients = self._work(parameters, gradient=True)
         return work.log_likelihood, self._gradient(parameters, work, orbit_gradients)
 
+    def gradient_and_linear_mean(self, parameters: Array) -> tuple[Array, Array]:
+        """The gradient, and the linear terms' conditional mean."""
+        work, orbit_gradients = self._work(parameters, gradient=True)
+        return self._gradient(parameters, work, orbit_gradients), work.beta
+
     def _gradient(self, parameters: Array, work: Work, orbit_gradients: list[list[Array]]) -> Array:
         return joint_gradient(self, parameters, work, orbit_gradients, self._engine)
 
@@ -226,11 +231,17 @@ class JointModel:
 
     # ---- results ----------------------------------------------------------------------------
 
-    def solve(self, parameters: Array) -> Solution:
-        """Everything a search or a prediction needs at these parameters."""
+    def solve(self, parameters: Array, velocities: bool = True) -> Solution:
+        """Everything a search or a prediction needs at these parameters.
+
+        Without ``velocities`` the linear terms only: ``rv_precision`` and the others are empty.
+        """
         work, _ = self._work(parameters, gradient=True, reference=True)
         n = self.data.n_obs
         mix, inverse_small = combinations(work, profile=False)
+        if not velocities:
+            covariance, none = inverse_small.T @ inverse_small, np.zeros(0)
+            return Solution(work.log_likelihood, work.beta, covariance, none[:, None], none, none)
         uv, st = residuals(work, mix)
         weight = work.weight[0]
         precision = -(uv[0, :, 1:] @ uv[0, :, 1:].T)

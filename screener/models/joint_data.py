@@ -107,6 +107,10 @@ class Solution:
     rv_weighted: Array
     activity_mean: Array  # velocity part of the latent process at the data, scaled units
 
+    def velocity_block(self, rows: IntArray) -> Array:
+        """Rows and columns ``rows`` of ``rv_precision``."""
+        return self.rv_precision[np.ix_(rows, rows)]
+
 
 def orbit_columns(
     term: OrbitTerm, parameters: Array, data: JointData, gradient: bool

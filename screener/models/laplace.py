@@ -21,7 +21,6 @@ import numpy as np
 
 from screener.core import Array, Orbit
 from screener.models.fitting import Fit, prior_terms
-from screener.models.joint import JointModel
 from screener.models.noise import NoiseModel
 
 __all__ = ["LaplaceErrors", "OrbitErrors", "laplace", "with_errors"]
@@ -90,13 +89,16 @@ def laplace(noise: NoiseModel, fit: Fit) -> LaplaceErrors:
     for j, index in enumerate(free):
         step = np.zeros(x.size)
         step[index] = _STEP
-        (above, b_above), (below, b_below) = _look(model, x + step), _look(model, x - step)
+        (above, b_above), (below, b_below) = (
+            model.gradient_and_linear_mean(x + step),
+            model.gradient_and_linear_mean(x - step),
+        )
         curvature[:, j] -= (above - below)[free] / (2 * _STEP)
         slopes[:, j] = (b_above - b_below) / (2 * _STEP)
     inside, curved = _inverse(0.5 * (curvature + curvature.T), (upper - lower)[free])
     covariance = np.zeros((x.size, x.size))
     covariance[np.ix_(free, free)] = inside
-    solution = model.solve(x)
+    solution = model.solve(x, velocities=False)
     linear = solution.linear_covariance + slopes @ inside @ slopes.T
     orbits = _orbit_errors(noise, fit, covariance, solution.linear_mean, linear)
     log_err, rotation = {}, None
@@ -125,12 +127,6 @@ def with_errors(orbits: list[Orbit], errors: LaplaceErrors) -> list[Orbit]:
             )
         )
     return out
-
-
-def _look(model: JointModel, parameters: Array) -> tuple[Array, Array]:
-    """Gradient of the log-likelihood and the linear terms' conditional mean."""
-    work, orbit_gradients = model._work(parameters, gradient=True)
-    return model._gradient(parameters, work, orbit_gradients), work.beta
 
 
 def _inverse(curvature: Array, width: Array) -> tuple[Array, bool]:

@@ -16,7 +16,7 @@ from typing import Any
 import numpy as np
 from scipy.linalg import lapack
 
-from screener.core import Array, NumericalError, ScreenerError
+from screener.core import Array, IntArray, NumericalError, ScreenerError
 from screener.models.linear_algebra import cholesky
 from screener.search.periodogram import Precision
 
@@ -80,6 +80,24 @@ class LongPrecision(Precision):
             np.einsum(column, sin, k_sin) - np.einsum(column, l_sin, l_sin),
         )
 
+    def block(self, rows: IntArray) -> Array:
+        """Rows and columns ``rows`` of the matrix."""
+        assert self.low_rank is not None
+        unit = np.zeros((self.weighted.size, rows.size))
+        unit[rows, np.arange(rows.size)] = 1
+        low = self.low_rank[rows]
+        return np.asarray(self.process.apply_inverse(unit)[rows] - low @ low.T)
+
+
+@dataclass(frozen=True, eq=False)
+class LongLinear:
+    """Marginal log-likelihood, mean of the linear terms, and L^-1 of their normal matrix L L^T."""
+
+    log_likelihood: float
+    beta: Array
+    inverse_small: Array
+    precision: LongPrecision
+
 
 @dataclass(frozen=True, eq=False)
 class LongModel:
@@ -102,7 +120,8 @@ class LongModel:
 
     names = ("period", "decay", "half", "amplitude", "jitter")
 
-    def _solve(self, parameters: Array) -> tuple[float, Array, LongPrecision]:
+    def solution(self, parameters: Array) -> LongLinear:
+        """Likelihood, linear terms and precision at these parameters (errors as below)."""
         from celerite2 import GaussianProcess
 
         period, decay, half, amplitude, *jitters = np.exp(parameters).tolist()
@@ -137,7 +156,7 @@ class LongModel:
             low_rank=solved[:, 1:] @ inverse.T,
             process=process,
         )
-        return log_likelihood, np.asarray(beta), precision
+        return LongLinear(log_likelihood, np.asarray(beta), np.asarray(inverse), precision)
 
     def _failure(self, parameters: Array) -> NumericalError:
         values = ", ".join(f"{v:.4g}" for v in np.exp(parameters))
@@ -157,14 +176,14 @@ class LongModel:
             If celerite2 is not installed.
         """
         _terms()
-        return self._solve(parameters)[0]
+        return self.solution(parameters).log_likelihood
 
     def precision(self, parameters: Array) -> LongPrecision:
         """What a periodogram on top of this noise needs (same errors)."""
         _terms()
-        return self._solve(parameters)[2]
+        return self.solution(parameters).precision
 
     def linear_mean(self, parameters: Array) -> Array:
         """Posterior mean of the linear terms, shape (n_linear,) (same errors)."""
         _terms()
-        return self._solve(parameters)[1]
+        return self.solution(parameters).beta

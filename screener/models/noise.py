@@ -37,6 +37,7 @@ class NoiseModel:
     scale: float  # m/s per scaled unit of the velocities
     max_iterations: int = 120
     n_evaluations: int = 0
+    approximation: str = ""  # what a reader must know where this stands for another model
     _fits: dict[tuple[OrbitTerm, ...], Fit] = field(default_factory=dict)
 
     def term(self, period: float, eccentric: bool = False) -> OrbitTerm:
@@ -146,7 +147,7 @@ class NoiseModel:
 
     def orbits(self, result: Fit) -> list[Orbit]:
         """The fitted orbits in physical units, with Laplace errors of the amplitude."""
-        solution = result.model.solve(result.parameters)
+        solution = result.model.solve(result.parameters, velocities=False)
         out = []
         column = result.model.data.columns.shape[2]
         data = self.data

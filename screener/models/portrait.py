@@ -23,6 +23,7 @@ from screener.models.fitting import Fit, HyperPrior
 from screener.models.joint import OrbitTerm
 from screener.models.kepler import orbit_velocity
 from screener.models.laplace import OrbitErrors, laplace
+from screener.models.long_noise import is_long, long_processes
 from screener.models.noise import NoiseModel, joint_process, white_noise
 from screener.models.rotation import PeriodDensity
 from screener.models.selection import choose_kernel
@@ -117,7 +118,11 @@ def paint(
     white = white_noise(scaled)
     progress("searching in white noise", 0.05)
     in_white = search_white(series, white, known, depth, forced)
-    process = joint_process(scaled, prior)
+    alone, process = (
+        long_processes(scaled, prior)
+        if is_long(series.n_obs)
+        else (joint_process(scaled, prior, joint=False), joint_process(scaled, prior))
+    )
     progress("searching on top of the activity model", 0.15)
     hints = [f.term.period for f in in_white.found]
     on_top = search_activity(series, process, known, depth, hints)
@@ -141,7 +146,7 @@ def paint(
     terms = [f.term for f, _ in found]
     activity_terms = [*accepted, *(f.term for f in on_top.found)]
     models = [white, white_noise(scaled, decorrelate=True)]
-    models += [joint_process(scaled, prior, joint=False), process]
+    models += [alone, process]
     fits = _company(models, activity_terms, [*accepted, *terms], in_white.fit, on_top.fit)
     sightings = []
     for i, (item, sources) in enumerate(found):
