@@ -64,7 +64,7 @@ TALES: tuple[tuple[str, str, int, Recipe], ...] = (
         87,
         Recipe(
             "active dwarf",
-            fixed_planets=(_planet(9.62, 5.9, 0.0, 0.0, 0.6),),
+            fixed_planets=(_planet(9.62, 4.4, 0.0, 0.0, 0.6),),
             body_teff=4900.0,
             rotation=18.6,
             inclination=1.1,
