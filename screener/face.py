@@ -129,9 +129,30 @@ def screen(
 
     Examples
     --------
+    With the scenario that comes with the source (any table and sidecar of yours will do):
+
     >>> import screener
-    >>> result = screener.screen("star.csv", depth="quick")  # doctest: +SKIP
-    >>> result.to_pandas()[["id", "period", "grade"]]  # doctest: +SKIP
+    >>> result = screener.screen("fixtures/heron_survey/stars/heron-47.csv", depth="quick")
+    >>> result.verdict.star.name
+    'Heron 47'
+    >>> for item in result.signals:
+    ...     orbit = item.signal.orbit
+    ...     print(item.signal.id, f"{orbit.period:.1f} d, {orbit.semi_amplitude:.0f} m/s")
+    S1 9.6 d, 5 m/s
+
+    Signals and findings come as tables, with units from astropy:
+
+    >>> list(result.to_pandas().columns)[:4]
+    ['star', 'id', 'period', 'period_err']
+    >>> str(result.to_table()["period"].unit)
+    'd'
+    >>> {"rotation", "joint_amplitude"} <= set(result.to_pandas("findings")["test"])
+    True
+
+    Why a signal has its grade, rule by rule, the first of them the odds before any evidence:
+
+    >>> result.signals[0].trace[0].rule
+    'prior'
     """
     from screener.pipeline import screen as screen_observations
     from screener.rules import load_rules

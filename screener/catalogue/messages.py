@@ -33,6 +33,9 @@ class StarTask:
     depth: str
     seed: int
     folder: Path | None = None  # where to draw a dossier, when that is the work
+    period: float | None = None  # d, a period to grade in any case
+    rules_file: str | None = None  # laid over the default rules
+    site: str | None = None  # observatory whose nights are ranked
 
 
 @dataclass(frozen=True, eq=False)

@@ -12,6 +12,7 @@ import heapq
 import json
 import time
 from collections.abc import Callable
+from dataclasses import replace
 from pathlib import Path
 from typing import Any
 
@@ -291,15 +292,7 @@ class _Run:
             pool.close()
 
     def _drawing_task(self, name: str) -> StarTask:
-        task = self._task(name)
-        return StarTask(
-            star=name,
-            table=task.table,
-            sidecar=task.sidecar,
-            depth=task.depth,
-            seed=task.seed,
-            folder=self.folder.star(name),
-        )
+        return replace(self._task(name), folder=self.folder.star(name))
 
     def _drawn(self, event: Event) -> None:
         reason = event.reason if isinstance(event, Failed) else str(event.result or "")

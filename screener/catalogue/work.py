@@ -9,7 +9,10 @@ from __future__ import annotations
 import json
 import math
 import warnings
+from collections.abc import Mapping
+from dataclasses import replace
 from pathlib import Path
+from typing import Any
 
 from screener.catalogue.messages import StarTask, WorkResult
 from screener.core import Array, Depth, Fold, Products, Screening, SignalVerdict
@@ -22,6 +25,7 @@ __all__ = [
     "preload",
     "screen_again",
     "screen_star",
+    "with_options",
 ]
 
 SCREEN = "screener.catalogue.work:screen_star"
@@ -40,11 +44,29 @@ def preload() -> None:
 def _screen(task: StarTask) -> Screening:
     from screener.intake import read_star
     from screener.pipeline import screen
+    from screener.rules import load_rules
 
     observations = read_star(task.table, task.sidecar)
+    overlay = None if task.rules_file is None else Path(task.rules_file)
     with warnings.catch_warnings():
         warnings.simplefilter("ignore")  # what matters is in the verdict's cautions
-        return screen(observations, depth=Depth(task.depth), seed=task.seed)
+        return screen(
+            observations, depth=Depth(task.depth), seed=task.seed,
+            rules=load_rules(overlay=overlay), period=task.period, site=task.site,
+        )  # fmt: skip
+
+
+def with_options(task: StarTask, verdict: Mapping[str, Any]) -> StarTask:
+    """The task with the options that a verdict records, depth and seed included."""
+    options = verdict.get("options") or {}  # early verdicts have none
+    return replace(
+        task,
+        depth=verdict["depth"],
+        seed=verdict["seed"],
+        period=options.get("period_d"),
+        rules_file=options.get("rules_file"),
+        site=options.get("site"),
+    )
 
 
 def screen_star(task: StarTask) -> WorkResult:
@@ -99,6 +121,8 @@ def binned_fold(
 def screen_again(task: StarTask) -> tuple[Screening, bool | None]:
     """Screen a star once more and say whether its verdict is the one in ``task.folder``.
 
+    Whatever options that verdict was made with are used again.
+
     Returns
     -------
     (Screening, bool or None)
@@ -106,10 +130,10 @@ def screen_again(task: StarTask) -> tuple[Screening, bool | None]:
     """
     from screener.report.verdict_json import verdict_to_dict
 
-    screening = _screen(task)
     if task.folder is None or not (task.folder / "verdict.json").is_file():
-        return screening, None
+        return _screen(task), None
     then = json.loads((task.folder / "verdict.json").read_text(encoding="utf-8"))
+    screening = _screen(with_options(task, then))
     now = json.loads(json.dumps(verdict_to_dict(screening.verdict)))
     for verdict in (then, now):
         for name in ("file", "sidecar", "photometry"):

@@ -17,8 +17,8 @@ def command(folders: tuple[Path, ...]) -> None:
     """Draw dossier.html and figures/ into the folder of a screened star.
 
     Where the curves were kept (by ``candidate``) they are drawn as they are. Otherwise the star is
-    screened once more from its recorded input, depth and seed; if that does not give the recorded
-    verdict, nothing is drawn.
+    screened once more from its recorded input with its recorded options, depth and seed; if that
+    does not give the recorded verdict, nothing is drawn.
     """
     from screener.catalogue.folder import full_disk_told
 

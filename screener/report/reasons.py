@@ -13,6 +13,7 @@ _LIMITS = ("veto", "cap", "floor")
 _PRIOR = "prior"
 _SILENT = (Outcome.NOT_APPLICABLE, Outcome.FAILED)
 _SPEAKING = (Outcome.SUPPORTS_PLANET, Outcome.SUPPORTS_STAR)
+_SAYS_NOTHING = ("sampling.", "signal.")  # what is measured, and how well; no evidence by itself
 _LEAST = 0.005  # log-odds; less shows as nought
 
 _GRADE_PHRASE = {
@@ -67,6 +68,8 @@ def deciding_findings(item: SignalVerdict, count: int = 3) -> tuple[Finding, ...
         if not counts(effect, item):
             continue
         limits = effect.effect in _LIMITS
+        if not limits and effect.findings and effect.findings[-1].startswith(_SAYS_NOTHING):
+            continue
         # the quantity that a weight is measured by stands last among what its rule looked at
         for text in effect.findings if limits else effect.findings[-1:]:
             found = _finding_named(text, item.findings)

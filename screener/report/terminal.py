@@ -14,7 +14,7 @@ from rich.text import Text
 from screener.core import Grade, SignalVerdict, Verdict
 from screener.report.reasons import deciding_findings
 from screener.report.style import GRADE_SYMBOL
-from screener.report.words import chance, compact, number, polished, short_odds, uncertain
+from screener.report.words import compact, false_alarm, number, polished, short_odds, uncertain
 
 __all__ = ["print_summary"]
 
@@ -103,7 +103,7 @@ def _table(verdict: Verdict, text: _Maker) -> Table:
             text(_tight(orbit.period, orbit.period_err, 5)),
             text(_tight(orbit.semi_amplitude, orbit.semi_amplitude_err, 3)),
             text(compact(orbit.eccentricity, 2)),
-            text(chance(item.signal.false_alarm_probability)),
+            text(false_alarm(item.signal)),
             text(f"{GRADE_SYMBOL[item.grade]} {item.grade.value}", _STYLE[item.grade]),
             text(short_odds(item.score).replace(" : ", ":")),
         )

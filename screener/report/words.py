@@ -13,6 +13,7 @@ __all__ = [
     "chance",
     "compact",
     "effect_text",
+    "false_alarm",
     "headline",
     "number",
     "odds",
@@ -135,6 +136,12 @@ def headline(verdict: Verdict) -> str:
         parts.append(f"{count}{noun} {_VERBS[grade][len(group) > 1]} ({named}{more})")
     text = "; ".join(parts) + "."
     return text[:1].upper() + text[1:]
+
+
+def false_alarm(signal: Signal) -> str:
+    """The false-alarm probability; a period that no search found has none."""
+    asked = set(signal.found_by) <= {"user", "known"}
+    return MISSING if asked else chance(signal.false_alarm_probability)
 
 
 def short_odds(score: float) -> str:

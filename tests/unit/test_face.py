@@ -2,6 +2,9 @@
 
 from __future__ import annotations
 
+import doctest
+import re
+import shutil
 import subprocess
 import sys
 from dataclasses import replace
@@ -17,6 +20,8 @@ import screener
 from screener.core import Depth, InputFault, InputFaults, Screening, Star
 from screener.face import Result, _observations, screen
 from tests.unit.report_sample import sample
+
+ROOT = Path(__file__).resolve().parents[2]
 
 
 def _frame(n_obs: int = 30) -> pd.DataFrame:
@@ -106,3 +111,27 @@ def test_screening_a_table_from_start_to_end():
     assert result.verdict.seed == 3
     again = screen(_frame(60), star=star, depth="quick", seed=3)
     assert again.to_dict() == result.to_dict()
+
+
+@pytest.mark.slow
+def test_the_examples_of_the_docstring_run(monkeypatch: pytest.MonkeyPatch):
+    monkeypatch.chdir(ROOT)
+    tests = doctest.DocTestFinder().find(screen, "screen", globs={})
+    outcome = [doctest.DocTestRunner().run(test) for test in tests]
+    assert sum(o.attempted for o in outcome) >= 7
+    assert sum(o.failed for o in outcome) == 0
+
+
+@pytest.mark.slow
+def test_the_example_of_the_readme_runs(tmp_path: Path, monkeypatch: pytest.MonkeyPatch):
+    (code,) = re.findall(r"```python\n(.*?)```", (ROOT / "README.md").read_text("utf-8"), re.DOTALL)
+    demo = ROOT / "fixtures" / "heron_survey" / "stars"
+    for kind in (".csv", ".toml"):
+        shutil.copy(demo / f"heron-47{kind}", tmp_path / f"STAR{kind}")
+    monkeypatch.chdir(tmp_path)
+    names: dict[str, object] = {}
+    exec(compile(code, "README.md", "exec"), names)
+    result = names["result"]
+    assert isinstance(result, Result)
+    assert len(result.signals) == 1
+    assert (tmp_path / "reports" / "STAR" / "dossier.html").is_file()

@@ -23,6 +23,7 @@ from screener.report.words import (
     chance,
     compact,
     effect_text,
+    false_alarm,
     number,
     odds,
     polished,
@@ -365,3 +366,9 @@ def test_any_system_mapping_is_shown():
         assert needed in text, needed
     assert system_blocks({}) == ()
     assert system_blocks({"planets": None, "stability": None, "nights": None}) == ()
+
+
+def test_a_period_that_was_asked_for_has_no_false_alarm_probability():
+    signal = replace(sample().verdict.signals[0].signal, false_alarm_probability=0.0)
+    assert false_alarm(replace(signal, found_by=("user",))) == "–"
+    assert false_alarm(replace(signal, found_by=("user", "white noise"))) == "<10⁻³⁰⁰"

@@ -1,0 +1,1 @@
+"""Bad tables and sidecars by the part that is at fault."""
