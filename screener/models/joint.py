@@ -149,6 +149,11 @@ class JointModel:
         work, orbit_gradients = self._work(parameters, gradient=True)
         return self._gradient(parameters, work, orbit_gradients), work.beta
 
+    def linear_terms(self, parameters: Array) -> tuple[float, Array, Array]:
+        """Log-likelihood, linear terms' mean, and the lower factor of their inverse covariance."""
+        work, _ = self._work(parameters, gradient=False)
+        return work.log_likelihood, work.beta, work.small_factor
+
     def _gradient(self, parameters: Array, work: Work, orbit_gradients: list[list[Array]]) -> Array:
         return joint_gradient(self, parameters, work, orbit_gradients, self._engine)
 

@@ -28,7 +28,7 @@ from screener.models.long import LongModel, LongPrecision
 from screener.models.noise import NoiseModel, velocities_only
 from screener.search.periodogram import Precision
 
-__all__ = ["DENSE_UP_TO", "LongJoint", "LongNoise", "is_long", "long_processes"]
+__all__ = ["DENSE_UP_TO", "OSCILLATORS", "LongJoint", "LongNoise", "is_long", "long_processes"]
 
 DENSE_UP_TO = 600  # velocities; beyond, the dense joint model takes many minutes a star
 _STEP = 1e-6
@@ -110,6 +110,15 @@ class LongJoint(JointModel):
         """As ``JointModel.gradient_and_linear_mean``."""
         _, gradient, beta = self._look(parameters)
         return gradient, beta
+
+    def linear_terms(self, parameters: Array) -> tuple[float, Array, Array]:
+        """As ``JointModel.linear_terms``."""
+        solved = self._long(parameters, False)[0].solution(self._own(parameters))
+        return (
+            solved.log_likelihood,
+            solved.beta,
+            np.asarray(np.linalg.inv(solved.inverse_small), dtype=np.float64),
+        )
 
     def _look(self, parameters: Array) -> tuple[float, Array, Array]:
         model, slopes = self._long(parameters, True)

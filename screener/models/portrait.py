@@ -22,9 +22,10 @@ from screener.models.exploration import (
 from screener.models.fitting import Fit, HyperPrior
 from screener.models.joint import OrbitTerm
 from screener.models.kepler import orbit_velocity
-from screener.models.laplace import OrbitErrors, laplace
+from screener.models.laplace import OrbitErrors
 from screener.models.long_noise import is_long, long_processes
 from screener.models.noise import NoiseModel, joint_process, white_noise
+from screener.models.reweighting import reweighted
 from screener.models.rotation import PeriodDensity
 from screener.models.selection import choose_kernel
 
@@ -184,7 +185,7 @@ def _with_errors(
     """Errors of the whole model, of the fit that each signal's orbit is taken from."""
     errors: dict[OrbitTerm, OrbitErrors] = {}
     for noise, result in ((white, white_fit), (process, activity_fit)):
-        found = laplace(noise, result).orbits
+        found = reweighted(noise, result).orbits
         errors |= dict(zip(result.model.orbits, found, strict=True))
     return [replace(s, errors=errors.get(s.term)) for s in sightings]
 

@@ -29,8 +29,8 @@ from screener.models.fitting import HyperPrior, prior_terms
 from screener.models.joint import JointData, OrbitTerm
 from screener.models.kepler import orbit_columns
 from screener.models.kernels import KERNELS
-from screener.models.laplace import laplace
 from screener.models.noise import NoiseModel
+from screener.models.reweighting import reweighted
 
 __all__ = ["RATES", "Pull", "Row", "draw_star", "main", "pulls", "table"]
 
@@ -123,7 +123,7 @@ def pulls(rng: np.random.Generator, eccentric: bool = False) -> list[Pull]:
     noise, truth, term = draw_star(rng, eccentric)
     without = noise.fit([], fresh=True)
     result = noise.fit([term], near=[without], fresh=True)
-    errors, orbit = laplace(noise, result), noise.orbits(result)[0]
+    errors, orbit = reweighted(noise, result), noise.orbits(result)[0]
     own = errors.orbits[0]
     start = result.model.slices["orbits"].start
     frequency = 1 / term.period + truth[start] / (2 * math.pi * noise.data.span)
