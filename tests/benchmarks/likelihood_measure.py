@@ -20,6 +20,8 @@ from scipy.optimize import minimize
 
 from screener.core import Array
 from screener.models.joint import JointModel
+from screener.models.long import rotation_term
+from screener.models.long_noise import OSCILLATORS, LongJoint
 from tests.benchmarks.likelihood_cases import (
     GeorgeOrbit,
     joint_case,
@@ -32,7 +34,7 @@ __all__ = ["measure"]
 
 _SIZES = (50, 100, 200, 400, 800, 1600, 3200)
 _LONG = (800, 1600, 3200, 6400)
-_DENSE_GEORGE = 1600  # rows beyond which george's gradient (five matrices) is left out
+_DENSE_GEORGE = 3200  # rows beyond which george's gradient (five matrices) is left out
 _DENSE_JOINT = 800
 
 
@@ -80,6 +82,47 @@ def _single(n: int) -> dict[str, float]:
         return lambda: one.value_and_gradient(parameters)
 
     taken = _in_turns([lambda: call(point), *map(run, paths.values())], _rounds(n))
+    return {name: _ratio(taken[0], t) for name, t in zip(paths, taken[1:], strict=True)}
+
+
+def _celerite(n: int) -> dict[str, float]:
+    """Likelihood and gradient of one series against celerite2, which has two damped oscillators.
+
+    The numpy interface of celerite2 has no gradient: its likelihood is differenced in the five
+    parameters, six evaluations in all. Ours: the long form (the same kernel, with linear terms)
+    and the dense quasi-periodic one with its exact gradient (another kernel, the same use).
+    """
+    from celerite2 import GaussianProcess
+
+    single, parameters, *_ = single_case(n)
+    long = LongJoint(single.data, OSCILLATORS, (False,))
+    point = np.array([math.log(23.0), math.log(50.0), math.log(0.5), 1.0, math.log(0.2)])
+    time_, y, variance = single.data.time, single.data.value[0], single.data.variance[0]
+
+    def likelihood(x: Array) -> float:
+        period, decay, half = np.exp(x[:3]).tolist()
+        process = GaussianProcess(rotation_term(period, decay, half, float(x[3])))
+        process.compute(time_, diag=variance + math.exp(2 * x[4]), check_sorted=False)
+        return float(process.log_likelihood(y))
+
+    def reference() -> Array:
+        value = likelihood(point)
+        return np.array([(likelihood(point + step) - value) / 1e-6 for step in 1e-6 * np.eye(5)])
+
+    value, gradient = long.value_and_gradient(point)
+    assert abs(value - likelihood(point)) < 1e-5 * abs(value), (value, likelihood(point))
+    assert np.allclose(gradient, reference(), rtol=1e-3, atol=1e-2), (gradient, reference())
+    paths: dict[str, JointModel] = {"long form": long}
+    if n <= _DENSE_JOINT:
+        for name, flag in _paths().items():
+            paths[f"dense {name}"] = replace(single, compiled=flag)
+    points = [point] + [parameters] * (len(paths) - 1)
+
+    def run(one: JointModel, x: Array) -> Callable[[], object]:
+        return lambda: one.value_and_gradient(x)
+
+    ours = [run(one, x) for one, x in zip(paths.values(), points, strict=True)]
+    taken = _in_turns([reference, *ours], min(_rounds(n) + 4, 41))
     return {name: _ratio(taken[0], t) for name, t in zip(paths, taken[1:], strict=True)}
 
 
@@ -230,6 +273,11 @@ def measure() -> dict[str, float | None]:
         if n == 200:
             for name in ("numpy", "numba"):
                 figures[f"gradient_vs_george_n200_{name}"] = row.get(name)
+    if importlib.util.find_spec("celerite2") is not None:
+        print("likelihood + gradient, one series: celerite2's time (differences) / ours")
+        for n in _SIZES:
+            row = _celerite(n)
+            print(f"  N={n:5d}  " + "  ".join(f"{k} {v:6.2f}" for k, v in row.items()), flush=True)
     print("three series jointly: our time / flop bound of the dense 3N Cholesky")
     for n in _SIZES:
         if n > _DENSE_JOINT:
