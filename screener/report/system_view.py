@@ -168,6 +168,16 @@ def _stability(stability: Any) -> list[Block]:
 _NIGHT_COLUMNS = ("rank", "date", "information_nat", "log_odds_so_far", "velocity_planet_m_s",
                   "velocity_star_m_s", "altitude_deg", "moon_distance_deg")  # fmt: skip
 
+_NIGHT_HEADS = {
+    "log_odds_so_far": "expected log-odds after it",
+    "velocity_planet_m_s": "velocity if planet (m/s)",
+    "velocity_star_m_s": "velocity if star (m/s)",
+}
+_NIGHTS_EXPLAINED = (
+    "Ranked by the information on which hypothesis is true that a velocity of that night is "
+    "expected to add, given those ranked above it."
+)
+
 
 def _nights(nights: Any) -> list[Block]:
     blocks = []
@@ -182,7 +192,8 @@ def _nights(nights: Any) -> list[Block]:
         site = nested(plan, "site")
         where = f" from {site}" if isinstance(site, str) else ""
         title = f"Nights that would settle {name}{where}"
-        head = tuple(label_of(k) for k in keys)
+        told.append(_NIGHTS_EXPLAINED)
+        head = tuple(_NIGHT_HEADS.get(k) or label_of(k) for k in keys)
         left = max(0, len(listed) - 10)
         blocks.append(Block(title, 1, tuple(told), head=head, rows=rows, left_out=left))
     return blocks
