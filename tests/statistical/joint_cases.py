@@ -27,11 +27,11 @@ from screener.models.rotation import PeriodDensity, estimate_rotation
 from screener.rules import load_rules
 from tests.statistical.evidence_cases import Recipe, fitted, nights
 
-__all__ = ["assessed", "drawn_star", "in_company", "ranked", "with_latent"]
+__all__ = ["N_DRAWS", "assessed", "drawn_star", "in_company", "ranked", "with_latent"]
 
 _TURN = 21.0
 _NIGHTS = 50
-_DRAWS = 19
+N_DRAWS = 19
 
 
 def drawn_star(seed: int, planet: tuple[float, float] | None = None) -> TimeSeries:
@@ -119,7 +119,7 @@ def ranked(seed: int) -> tuple[float, float, bool]:
     judged, _ = judge(star, series, portrait, rotation, density, rules, Depth.QUICK, seed)
     draws = tuple(
         tuple(_judge_draw(star, rules, draw_series(series, portrait, rng), i))
-        for i, rng in enumerate(np.random.default_rng([seed, 107]).spawn(_DRAWS))
+        for i, rng in enumerate(np.random.default_rng([seed, 107]).spawn(N_DRAWS))
     )
     best = max(judged, key=lambda j: j.graded.score, default=None)
     case = best.case if best is not None else fitted(series, Recipe(error=1.0), seed)
