@@ -4,9 +4,9 @@
 
 Whole stars are held out; nothing is chosen on them. On the others the weights of the rules marked
 ``fitted`` come from ``fitting``, then the thresholds from out-of-fold scores: ``planetary_above``
-is the lowest one that keeps false planets per star at the target, ``likely_stellar_below`` the
-highest one that keeps planets called stellar at theirs. The same inputs and seed give the same
-file.
+is the lowest one that keeps false planets per star at the target; ``likely_stellar_below`` is as
+low as the share of signals that may be left ambiguous allows, and lower where planets called
+stellar would exceed their target. The same inputs and seed give the same file.
 """
 
 from __future__ import annotations
@@ -29,9 +29,9 @@ from screener.rules.types import Rule, RuleSet, Thresholds
 
 __all__ = ["calibrate", "choose_thresholds", "main", "weights_text"]
 
-# a signal is not called planetary below odds of about 4:1, nor stellar above even odds, however
+# a signal is not called planetary below odds of about 11:2, nor stellar above even odds, however
 # few the stars that would forbid it (common practice, no source)
-LEAST_PLANETARY, MOST_STELLAR = 1.4, 0.0
+LEAST_PLANETARY, MOST_STELLAR = 1.7, 0.0
 LEAST_GAP = 0.1
 
 
@@ -44,7 +44,12 @@ def _down(value: float) -> float:
 
 
 def choose_thresholds(
-    population: Population, rules: RuleSet, score: Array, max_false: float, max_killed: float
+    population: Population,
+    rules: RuleSet,
+    score: Array,
+    max_false: float,
+    max_killed: float,
+    max_ambiguous: float,
 ) -> tuple[Thresholds, list[str]]:
     """Thresholds that keep the two errors at their targets.
 
@@ -56,6 +61,8 @@ def choose_thresholds(
         False planets per star.
     max_killed : float
         Share of the planets with snr of 7.5 or more called stellar.
+    max_ambiguous : float
+        Share of all signals that may be left ambiguous for the sake of planets.
 
     Returns
     -------
@@ -78,6 +85,13 @@ def choose_thresholds(
     stellar = min(
         _down(low[allowed]) if low.size > allowed else math.inf, MOST_STELLAR, planetary - LEAST_GAP
     )
+    known = np.isfinite(score) & ~limits["veto"]
+    undecided = known & ((score < planetary) | limits["cap"])
+    free = np.sort(score[undecided & ~limits["floor"]])[::-1]
+    held = int(np.count_nonzero(undecided & limits["floor"]))
+    budget = math.floor(max_ambiguous * np.count_nonzero(np.isfinite(score))) - held
+    if 0 < budget < free.size:
+        stellar = min(stellar, _up(free[budget]))
     return Thresholds(planetary, stellar), notes
 
 
@@ -111,6 +125,7 @@ def calibrate(
     cost: float = 1.0,
     max_false: float = 0.005,
     max_killed: float = 0.003,
+    max_ambiguous: float = 0.1,
     n_folds: int = 5,
 ) -> Calibration:
     """Fit weights, intercept and thresholds; see the module.
@@ -148,7 +163,7 @@ def calibrate(
     )
     score = np.full(use.size, np.nan)
     score[use] = fit.scores
-    thresholds, notes = choose_thresholds(trained, new, score, max_false, max_killed)
+    thresholds, notes = choose_thresholds(trained, new, score, max_false, max_killed, max_ambiguous)
     kept = tuple(rules.rules[k].id for k in marked if k not in chosen)
     if kept:
         notes.append(f"seen on fewer than {MIN_ACTIVE} signals, weight kept: {', '.join(kept)}")
@@ -225,6 +240,8 @@ def _rules_before(rule_file: Path, plain: RuleSet) -> RuleSet:
               help="False planets per star.")  # fmt: skip
 @click.option("--max-killed", type=click.FloatRange(0.0, 1.0), default=0.003, show_default=True,
               help="Share of planets called stellar.")  # fmt: skip
+@click.option("--max-ambiguous", type=click.FloatRange(0.0, 1.0), default=0.1, show_default=True,
+              help="Share of signals that may stay ambiguous for the sake of planets.")  # fmt: skip
 @click.option("--dry-run", is_flag=True, help="Write nothing.")
 def main(
     verdicts: Path,
@@ -237,6 +254,7 @@ def main(
     cost: float,
     max_false: float,
     max_killed: float,
+    max_ambiguous: float,
     dry_run: bool,
 ) -> None:
     """Fit the weights of the rules on screened stars whose truth is known."""
@@ -247,7 +265,7 @@ def main(
         population = read_population(verdicts, truth, plain)
         result = calibrate(
             population, plain, holdout=holdout, seed=seed, cost=cost,
-            max_false=max_false, max_killed=max_killed,
+            max_false=max_false, max_killed=max_killed, max_ambiguous=max_ambiguous,
         )  # fmt: skip
         out = out or rule_file.with_name("weights.toml")
         text = markdown(result, before, seed)
