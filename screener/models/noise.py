@@ -37,6 +37,7 @@ class NoiseModel:
     scale: float  # m/s per scaled unit of the velocities
     max_iterations: int = 120
     n_evaluations: int = 0
+    n_starts: int = 2  # of a fresh fit; with 2 a poor optimum stays in one star of thirty
     approximation: str = ""  # what a reader must know where this stands for another model
     _fits: dict[tuple[OrbitTerm, ...], Fit] = field(default_factory=dict)
 
@@ -60,7 +61,7 @@ class NoiseModel:
         model = self.model(key)
         starts = [self.transfer(model, other) for other in near]
         if fresh or not starts:
-            starts += starting_points(model, self.prior, self._signs())
+            starts += starting_points(model, self.prior, self._signs(), self.n_starts)
         result = fit(model, self.prior, starts, self.max_iterations)
         self.n_evaluations += result.n_evaluations
         if known is None or result.objective > known.objective:

@@ -32,6 +32,7 @@ from screener.models.selection import choose_kernel
 __all__ = ["Portrait", "Sighting", "paint", "rotation_prior"]
 
 _INDICATORS = {Depth.QUICK: 3, Depth.STANDARD: 3, Depth.DEEP: 4}
+_STARTS = {Depth.QUICK: 2, Depth.STANDARD: 4, Depth.DEEP: 6}  # of each fresh fit
 _KERNELS_UP_TO = 400  # velocities; the slower kernels are not tried on longer series
 _UNKNOWN_ROTATION = HyperPrior(math.log(25.0), 0.6)
 
@@ -45,6 +46,7 @@ class Sighting:
     found_by: tuple[str, ...]
     assessment: Assessment
     errors: OrbitErrors | None = None  # of the whole model, from standard depth on
+    false_alarm_shuffled: float | None = None  # of doubtful signals, from standard depth on
 
     @property
     def orbit(self) -> Orbit:
@@ -102,6 +104,7 @@ def paint(
     depth: Depth,
     *,
     forced: Sequence[float] = (),
+    seed: int = 1,
     progress: Callable[[str, float], None] = lambda _stage, _share: None,
 ) -> Portrait:
     """Search, fit and assess.
@@ -118,12 +121,13 @@ def paint(
     )
     white = white_noise(scaled)
     progress("searching in white noise", 0.05)
-    in_white = search_white(series, white, known, depth, forced)
+    in_white = search_white(series, white, known, depth, forced, seed)
     alone, process = (
         long_processes(scaled, prior)
         if is_long(series.n_obs)
         else (joint_process(scaled, prior, joint=False), joint_process(scaled, prior))
     )
+    alone.n_starts = process.n_starts = _STARTS[depth]
     progress("searching on top of the activity model", 0.15)
     hints = [f.term.period for f in in_white.found]
     on_top = search_activity(series, process, known, depth, hints)
@@ -156,7 +160,15 @@ def paint(
             series, item.term, activity_terms, [*accepted, *terms], models, fits,
             in_white.frequency,
         )  # fmt: skip
-        sightings.append(Sighting(item.term, item.false_alarm_probability, sources, result))
+        sightings.append(
+            Sighting(
+                item.term,
+                item.false_alarm_probability,
+                sources,
+                result,
+                false_alarm_shuffled=item.resampled,
+            )
+        )
     everything = fits["white noise"]
     if depth is not Depth.QUICK:
         sightings = _with_errors(sightings, process, on_top.fit, white, everything)
@@ -207,7 +219,8 @@ def _united(
         ]
         sources = tuple(dict.fromkeys(f.found_by for f in twins))
         fap = min(f.false_alarm_probability for f in twins)
-        out.append((Found(term, fap, twins[0].found_by), sources))
+        shuffled = next((f.resampled for f in twins if f.resampled is not None), None)
+        out.append((Found(term, fap, twins[0].found_by, shuffled), sources))
     return out
 
 

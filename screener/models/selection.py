@@ -69,6 +69,7 @@ def choose_kernel(
         if name == _DEFAULT:
             continue
         noise = joint_process(scaled, prior, kernel=name)
+        noise.n_starts = default.n_starts
         try:
             trial = noise.fit(list(terms), fresh=True)
             evidence[name] = log_evidence(noise, trial)

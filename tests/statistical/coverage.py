@@ -39,6 +39,7 @@ DERIVATIVE = (True, False, True)  # velocities, width, bisector
 ERROR = 0.15  # of every value, in units of a series' scatter
 RATES = {1: math.erf(1 / math.sqrt(2)), 2: math.erf(2 / math.sqrt(2))}
 LEAST_P = 0.01
+STARTS = 4  # as at standard depth
 
 
 @dataclass(frozen=True)
@@ -74,7 +75,9 @@ def draw_star(rng: np.random.Generator, eccentric: bool) -> tuple[NoiseModel, Ar
         np.repeat(np.arange(3)[:, None], n, axis=1), 3, np.repeat(np.eye(3)[:, None, :], n, 1),
         np.full(3, 1e3),
     )  # fmt: skip
-    noise = NoiseModel("joint process", data, KERNELS["quasi-periodic"], DERIVATIVE, PRIOR, 1.0)
+    noise = NoiseModel(
+        "joint process", data, KERNELS["quasi-periodic"], DERIVATIVE, PRIOR, 1.0, n_starts=STARTS
+    )
     # between rotation harmonics or on them: any period that the baseline holds four times
     true_period = math.exp(rng.uniform(math.log(2.0), math.log(span / 4)))
     offset = rng.uniform(-0.25, 0.25) / data.span
