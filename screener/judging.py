@@ -159,6 +159,7 @@ def _signal(id: str, sighting: Sighting) -> Signal:
         id=id,
         orbit=sighting.orbit,
         false_alarm_probability=sighting.false_alarm_probability,
+        false_alarm_shuffled=sighting.false_alarm_shuffled,
         found_by=sighting.found_by,
         white_gain=gains["white noise"],
         activity_gain=gains["joint process"],

@@ -115,6 +115,7 @@ def _screen(
         density,
         depth,
         forced=(period,) if period else (),
+        seed=seed,
         progress=tell,
     )
     tell("lines of evidence", 0.75)

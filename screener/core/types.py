@@ -269,6 +269,7 @@ class Signal:
     white_gain: float = 0.0  # log-likelihood gain over white noise
     activity_gain: float = 0.0  # log-likelihood gain over the activity model
     known: bool = False
+    false_alarm_shuffled: float | None = None  # by shuffling residuals; of doubtful signals only
 
 
 @dataclass(frozen=True)

@@ -9,7 +9,7 @@ from __future__ import annotations
 
 import math
 from collections.abc import Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 
@@ -17,7 +17,12 @@ from screener.core import Array, Depth, KnownPlanet, TimeSeries
 from screener.models.fitting import FREQUENCY_REACH, Fit
 from screener.models.joint import OrbitTerm
 from screener.models.noise import NoiseModel
-from screener.search.false_alarm import analytic, effective_baseline, gain_with_free_scale
+from screener.search.false_alarm import (
+    analytic,
+    effective_baseline,
+    gain_with_free_scale,
+    resampled,
+)
 from screener.search.periodogram import (
     SHORTEST_PERIOD,
     Peak,
@@ -42,6 +47,8 @@ _ECCENTRIC_GAIN = 5.0  # what two more parameters must bring
 _STRONG = 40.0  # gain above which an orbit's shape can be told
 _NEAR_BEST = 6.0  # peaks this close to the highest are tried as well
 _RIVAL = 2.0  # an alias within this of the chosen period is fitted in full
+_WORTH_SHUFFLING = 1e-4  # far below it no shuffled series would ever reach the signal
+_SHUFFLES = 199
 _ALIAS_REACH = 9.0  # daily aliases this close, since other signals distort the heights
 
 
@@ -52,6 +59,7 @@ class Found:
     term: OrbitTerm
     false_alarm_probability: float
     found_by: str
+    resampled: float | None = None  # the same probability by shuffling, where it was asked for
 
 
 @dataclass(frozen=True, eq=False)
@@ -166,9 +174,13 @@ def search_white(
     known: Sequence[KnownPlanet],
     depth: Depth,
     forced: Sequence[float] = (),
+    seed: int = 1,
 ) -> Search:
-    """Signals one by one in white noise, each time refining all orbits together."""
-    return _search(series, noise, known, depth, forced, (), "white noise")
+    """Signals one by one in white noise, each time refining all orbits together.
+
+    ``seed`` is that of the shuffling that checks doubtful false-alarm probabilities.
+    """
+    return _search(series, noise, known, depth, forced, (), "white noise", seed)
 
 
 def search_activity(
@@ -190,6 +202,7 @@ def _search(
     forced: Sequence[float],
     hints: Sequence[float],
     name: str,
+    seed: int = 1,
 ) -> Search:
     oversampling = 4.0 if depth is Depth.QUICK or series.baseline > 4000 else 6.0
     grid = frequency_grid(series.baseline, oversampling)
@@ -202,7 +215,9 @@ def _search(
     result = noise.fit(terms, fresh=True)
     fits, gains = [result], []
     while True:
-        gain = power(series.time, noise.precision(result), grid)
+        precision = noise.precision(result)
+        gain = power(series.time, precision, grid)
+        highest = float(np.max(gain, where=_apart(grid, terms, series.baseline), initial=0.0))
         if white:
             n_free = series.n_obs - result.model.data.columns.shape[2] - 2 * len(terms)
             gain = gain_with_free_scale(gain, float(max(n_free, 2)), max(n_free, 2))
@@ -224,12 +239,13 @@ def _search(
         probability = analytic(reached, bandwidth, span)
         if probability > _ACCEPT:
             break
-        found.append(Found(term, probability, name))
+        shuffles = None
+        if white and depth is not Depth.QUICK and probability > _WORTH_SHUFFLING:
+            rng = np.random.default_rng(np.random.SeedSequence([seed, 31, len(found)]))
+            shuffles = resampled(series.time, precision, grid, highest, _SHUFFLES, rng)
+        found.append(Found(term, probability, name, shuffles))
         terms, result = _shape(noise, [*terms, term], better)
-        found = [
-            Found(t, f.false_alarm_probability, f.found_by)
-            for t, f in zip(terms[len(known) :], found, strict=True)
-        ]
+        found = [replace(f, term=t) for t, f in zip(terms[len(known) :], found, strict=True)]
         fits.append(result)
     if found and found[0].found_by == name:
         found, result = _settle_aliases(series, noise, found, result, len(known))
@@ -269,7 +285,7 @@ def _settle_aliases(
         better = trial.objective + log_occurrence(other.period)
         if better > result.objective + log_occurrence(term.period):
             result = trial
-            found[i] = Found(other, found[i].false_alarm_probability, found[i].found_by)
+            found[i] = replace(found[i], term=other)
     return found, result
 
 

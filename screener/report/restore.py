@@ -145,6 +145,7 @@ def _signal(item: Mapping[str, Any], *, known: bool = False) -> Signal:
         white_gain=_real(item["white_gain"]),
         activity_gain=_real(item["activity_gain"]),
         known=known,
+        false_alarm_shuffled=item.get("false_alarm_shuffled"),
     )
 
 

@@ -145,11 +145,13 @@ def signal_view(item: SignalVerdict) -> SignalView:
     speaking = sorted(item.findings, key=lambda f: order.index(f.outcome))
     views = [_finding_view(f) for f in speaking]
     ran = [f.outcome not in _NOT_RUN for f in speaking]
+    shuffled = signal.false_alarm_shuffled
     facts = (
         ("period", period(signal)),
         ("semi-amplitude", amplitude(signal)),
         ("eccentricity", uncertain(orbit.eccentricity, orbit.eccentricity_err, 2)),
         ("false-alarm probability", false_alarm(signal)),
+        *([] if shuffled is None else [("the same by shuffling", chance(shuffled))]),
         ("found by", ", ".join(signal.found_by)),
         ("gain over white noise", f"{number(signal.white_gain, 3)} in ln L"),
         ("gain over the activity model", f"{number(signal.activity_gain, 3)} in ln L"),

@@ -215,6 +215,7 @@ def _signal(signal: Signal) -> dict[str, Any]:
         "found_by": signal.found_by,
         "white_gain": signal.white_gain,
         "activity_gain": signal.activity_gain,
+        "false_alarm_shuffled": signal.false_alarm_shuffled,
     }
 
 

@@ -55,30 +55,28 @@ def level(probability: float, bandwidth: float, baseline: float) -> float:
 
 def resampled(
     time: Array,
-    residual: Array,
     precision: Precision,
     frequency: Array,
     gain: float,
     n_draws: int,
     rng: np.random.Generator,
 ) -> float:
-    """The same by shuffling ``residual`` (velocities less the model without the signal).
+    """The same by shuffling what the model without the signal leaves, for white noise.
 
-    Residuals are shuffled in units of their noise, so that errors stay with their times. Returns
-    (k + 1) / (n_draws + 1).
+    ``precision`` is of the diagonal kind; ``gain`` the highest power that it gives at
+    ``frequency``. Residuals are shuffled in units of their noise, so that errors stay with their
+    times. Returns (k + 1) / (n_draws + 1) (Phipson & Smyth 2010, Stat. Appl. Genet. Mol. Biol. 9,
+    39).
     """
-    weight = precision.weight if precision.weight is not None else np.diagonal(precision.matrix)  # type: ignore[arg-type]
-    scaled = residual * np.sqrt(weight)
+    weight, low_rank = precision.weight, precision.low_rank
+    if weight is None or low_rank is None:
+        raise ValueError("residuals of correlated noise cannot be shuffled")
+    root = np.sqrt(weight)
+    scaled = precision.weighted / root  # residuals over their noise
     exceed = 0
     for _ in range(n_draws):
-        shuffled = rng.permutation(scaled) / np.sqrt(weight)
-        if precision.matrix is not None:
-            weighted = precision.matrix @ shuffled
-        else:
-            assert precision.weight is not None and precision.low_rank is not None
-            weighted = precision.weight * shuffled - precision.low_rank @ (
-                precision.low_rank.T @ shuffled
-            )
-        draw = Precision(weighted, precision.matrix, precision.weight, precision.low_rank)
+        shuffled = rng.permutation(scaled) / root
+        weighted = weight * shuffled - low_rank @ (low_rank.T @ shuffled)
+        draw = Precision(weighted, None, weight, low_rank)
         exceed += bool(power(time, draw, frequency).max() >= gain)
     return (exceed + 1) / (n_draws + 1)

@@ -189,7 +189,7 @@ def test_resampled_agrees_with_analytic(wanted: float) -> None:
     frequency = frequency_grid(120.0, 4.0, SHORTEST)
     bandwidth = float(np.ptp(frequency))
     gain = level(wanted, bandwidth, effective_baseline(time, 1 / error**2))
-    found = resampled(time, y, white(y, error, True), frequency, gain, 200, rng)
+    found = resampled(time, white(y, error, True), frequency, gain, 200, rng)
     error_of_count = math.sqrt(wanted * (1 - wanted) / 200)
     assert found < wanted + 3 * error_of_count
     assert found > wanted / 3 - 3 * error_of_count
@@ -204,7 +204,7 @@ def test_resampled_probabilities_are_uniform_under_the_null() -> None:
         y = rng.normal(0, error)
         precision = white(y, error, True)
         top = float(power(time, precision, frequency).max())
-        out.append(resampled(time, y, precision, frequency, top, 19, rng))
+        out.append(resampled(time, precision, frequency, top, 19, rng))
     steps = np.array(out) * 20  # each of 1 ... 20 equally likely
     assert stats.kstest((steps - rng.uniform(0, 1, steps.size)) / 20, "uniform").pvalue > 0.01
 

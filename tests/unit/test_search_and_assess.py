@@ -57,6 +57,27 @@ def _white(series: TimeSeries) -> list[float]:
     return [o.period for o in noise.orbits(search_white(series, noise, (), Depth.QUICK).fit)]
 
 
+def test_a_doubtful_signal_is_checked_by_shuffling() -> None:
+    rng = np.random.default_rng(4)
+    time = _nights(rng, 60, 300)
+    checked = 0
+    for amplitude in (0.9, 1.0, 1.1, 4.0):
+        signal = keplerian_velocity(time, 7.3, amplitude, 0.0, 0.4, 3.0)
+        series = _series(rng, signal=signal, time=time)
+        noise = white_noise(scaled_data(series, (), 1000.0))
+        first, again = (search_white(series, noise, (), Depth.STANDARD, seed=7) for _ in range(2))
+        assert [f.resampled for f in first.found] == [f.resampled for f in again.found]
+        for found in first.found:
+            if found.false_alarm_probability < 1e-4:
+                assert found.resampled is None
+            else:
+                checked += 1
+                assert found.resampled is not None
+                # both ask the same; counts of 200 leave room for a factor of some
+                assert 1 / 200 <= found.resampled < 0.06
+    assert checked
+
+
 def test_noise_gives_no_signal() -> None:
     counts = [len(_white(_series(np.random.default_rng(seed)))) for seed in range(12)]
     # one in a hundred is the search's own level; three in twelve would be a chance of 2e-4
