@@ -138,7 +138,7 @@ def screen(
     >>> for item in result.signals:
     ...     orbit = item.signal.orbit
     ...     print(item.signal.id, f"{orbit.period:.1f} d, {orbit.semi_amplitude:.0f} m/s")
-    S1 9.6 d, 5 m/s
+    S1 9.6 d, 4 m/s
 
     Signals and findings come as tables, with units from astropy:
 
