@@ -68,7 +68,7 @@ class Result:
         self,
         folder: Path | str,
         formats: tuple[str, ...] = ("html",),
-        figure_formats: tuple[str, ...] = ("png",),
+        figure_formats: tuple[str, ...] | None = None,
     ) -> tuple[Path, ...]:
         """Write verdict and dossier to a folder; see ``screener.report.write_dossier``."""
         from screener.report.dossier import write_dossier

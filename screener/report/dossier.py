@@ -74,7 +74,7 @@ def write_dossier(
     screening: Screening,
     out_dir: Path | str,
     formats: Iterable[str] = ("html",),
-    figure_formats: Iterable[str] = ("png",),
+    figure_formats: Iterable[str] | None = None,
 ) -> tuple[Path, ...]:
     """Write ``dossier.*`` and ``figures/`` into a folder, which is made if need be.
 
@@ -82,8 +82,9 @@ def write_dossier(
     ----------
     formats : iterable of str
         Of "html", "md" and "pdf".
-    figure_formats : iterable of str
-        Of "png", "svg" and "pdf"; what is written to ``figures/``. None of them, no figures.
+    figure_formats : iterable of str, optional
+        Of "png", "svg" and "pdf"; what is written to ``figures/``. If absent, SVG, and PNG where
+        the Markdown links to it.
 
     Returns
     -------
@@ -97,7 +98,10 @@ def write_dossier(
     OSError
         If a file cannot be written.
     """
-    out, formats, kinds = Path(out_dir), tuple(formats), tuple(figure_formats)
+    out, formats = Path(out_dir), tuple(formats)
+    if figure_formats is None:
+        figure_formats = ("svg", "png") if "md" in formats else ("svg",)
+    kinds = tuple(figure_formats)
     unknown = sorted(set(formats) - set(DOSSIER_FORMATS))
     if unknown:
         raise ValueError(
