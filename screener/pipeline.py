@@ -22,11 +22,13 @@ from screener.core import (
     Screening,
     Signal,
     SignalVerdict,
+    TimeSeries,
     Verdict,
 )
 from screener.curves import products
 from screener.judging import Judged, Progress, against_own_null, judge
 from screener.models.laplace import laplace
+from screener.models.planet_evidences import evidence_problem, planet_evidences
 from screener.models.portrait import Portrait, paint
 from screener.models.posterior import sample
 from screener.models.rotation import estimate_rotation
@@ -35,7 +37,7 @@ from screener.system import describe_system, references_used
 
 __all__ = ["Progress", "screen"]
 
-_STEPS = 4000  # of each walker at the deep level
+_STEPS = 6000  # of each walker at the deep level
 _METHODS = ("baluev2008", "zechmeister2009", "rajpaul2015", "haywood2014", "delisle2020")
 
 
@@ -129,6 +131,9 @@ def _screen(
     if depth is Depth.DEEP:
         tell("sampling the posterior", 0.92)
         posterior = _sampled(portrait, seed)
+        if not portrait.noise.approximation:
+            tell("weighing the number of planets", 0.94)
+            posterior["evidences"] = _evidences(portrait, series, seed)
     verdict = _verdict(
         observations, portrait, rotation, judged, known, posterior,
         rules=rules, depth=depth, seed=seed, site=site,
@@ -231,6 +236,14 @@ def _sampled(portrait: Portrait, seed: int) -> dict[str, Any]:
     }
 
 
+def _evidences(portrait: Portrait, series: TimeSeries, seed: int) -> list[dict[str, Any]]:
+    """Evidences of up to one planet more than the activity model holds."""
+    problem = evidence_problem(portrait, series.time, series.rv_err)
+    most = len(portrait.activity.fit.model.orbits) + 1
+    rng = np.random.default_rng(np.random.SeedSequence([seed, 16]))
+    return [asdict(e) for e in planet_evidences(problem, most, rng)]
+
+
 def _cautions(
     observations: Observations,
     portrait: Portrait,
@@ -254,6 +267,12 @@ def _cautions(
         out.append(portrait.noise.approximation)
     if not all(m.converged for m in portrait.comparisons):
         out.append("A model fit stopped before it converged; its numbers are less certain.")
+    apart = [e for e in (posterior or {}).get("evidences", ()) if not e["agree"]]
+    if apart:
+        out.append(
+            "Two methods disagree on the evidence of "
+            f"{' and '.join(str(e['n_planets']) for e in apart)} planets; trust neither closely."
+        )
     if posterior is not None and not posterior["converged"]:
         out.append(
             "The posterior samples have not converged "

@@ -156,7 +156,6 @@ _ALL = (
     Reference("virtanen2020", "Virtanen, P. and others", 2020, "SciPy 1.0: fundamental algorithms for scientific computing in Python", "Nature Methods", "17", "261", "10.1038/s41592-019-0686-2", "linear algebra and optimisers"),
     Reference("hunter2007", "Hunter, J. D.", 2007, "Matplotlib: a 2D graphics environment", "Computing in Science & Engineering", "9", "90", "10.1109/MCSE.2007.55", "figures"),
     Reference("foremanmackey2013", "Foreman-Mackey, D. and Hogg, D. W. and Lang, D. and Goodman, J.", 2013, "emcee: the MCMC hammer", "Publications of the Astronomical Society of the Pacific", "125", "306", "10.1086/670067", "ensemble sampler"),
-    Reference("speagle2020", "Speagle, J. S.", 2020, "dynesty: a dynamic nested sampling package for estimating Bayesian posteriors and evidences", _MN, "493", "3132", "10.1093/mnras/staa278", "nested sampling"),
     Reference("rein2012", "Rein, H. and Liu, S.-F.", 2012, "REBOUND: an open-source multi-purpose N-body code for collisional dynamics", _AA, "537", "A128", "10.1051/0004-6361/201118085", "N-body integration"),
 )
 # fmt: on

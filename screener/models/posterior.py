@@ -115,7 +115,9 @@ def sample(
     cloud = start.parameters + 0.5 * width * rng.standard_normal((n_walkers, width.size))
     inside = np.nextafter(lower, np.inf), np.nextafter(upper, -np.inf)
     cloud = np.clip(cloud, *inside)
-    sampler = emcee.EnsembleSampler(n_walkers, model.n_parameters, log_probability)
+    # differences between walkers cross long, narrow valleys that stretches only creep along
+    moves = [(emcee.moves.DEMove(), 0.8), (emcee.moves.DESnookerMove(), 0.2)]
+    sampler = emcee.EnsembleSampler(n_walkers, model.n_parameters, log_probability, moves=moves)
     sampler.random_state = np.random.MT19937(int(rng.integers(2**32))).state
     sampler.run_mcmc(cloud, n_steps, skip_initial_state_check=True)
     chains = sampler.get_chain(discard=n_steps // 2)

@@ -114,6 +114,12 @@ def _rest(paper: Paper, view: DossierView) -> None:
         paper.text(view.models_note, 8, colour="muted")
     else:
         paper.text("No models were compared at this depth.")
+    if view.evidences:
+        head = ("planets", "log10 Z", "log10 Z by a second method", "agree")
+        paper.table(head, view.evidences, (12, 26, 32, 12))
+    if view.posterior:
+        paper.table(("quantity", "median", "68 % interval"), view.posterior, (30, 25, 45))
+        paper.text(view.posterior_note, 8, colour="muted")
     paper.heading("The star's null")
     for name, finding in view.null:
         paper.text(f"{name}: {finding.sentence} {finding.numbers}")

@@ -56,6 +56,9 @@ class DossierView:
     models_head: tuple[str, ...]
     models: tuple[tuple[str, ...], ...]
     models_note: str
+    evidences: tuple[tuple[str, ...], ...]
+    posterior: tuple[tuple[str, ...], ...]
+    posterior_note: str
     null: tuple[tuple[str, FindingView], ...]
     system: tuple[Block, ...]
     data: tuple[str, ...]
@@ -86,6 +89,9 @@ def build_view(verdict: Verdict) -> DossierView:
         models_head=models_head,
         models=models,
         models_note=models_note,
+        evidences=_evidences(verdict),
+        posterior=_posterior(verdict),
+        posterior_note=_posterior_note(verdict),
         null=null_findings(verdict),
         system=system_blocks(verdict.system),
         data=_data_sentences(verdict),
@@ -184,6 +190,51 @@ def _models(verdict: Verdict) -> tuple[tuple[str, ...], tuple[tuple[str, ...], .
             "compares with each other and not with that of white noise."
         )
     return head, tuple(rows), note
+
+
+def _evidences(verdict: Verdict) -> tuple[tuple[str, ...], ...]:
+    """Number of planets, evidence by two methods, and whether they agree; at deep depth only."""
+    return tuple(
+        (
+            str(e["n_planets"]),
+            uncertain(e["log10_z"], e["log10_z_err"]),
+            uncertain(e["check_log10_z"], e["check_log10_z_err"]),
+            "yes" if e["agree"] else "no",
+        )
+        for e in (verdict.posterior or {}).get("evidences", ())
+    )
+
+
+def _posterior(verdict: Verdict) -> tuple[tuple[str, ...], ...]:
+    """Medians and 68 % intervals of sampled quantities; at deep depth only."""
+    posterior = verdict.posterior or {}
+    named = [
+        (f"orbit {i}, {word}", orbit[key], unit)
+        for i, orbit in enumerate(posterior.get("orbits", ()), start=1)
+        for key, word, unit in (("period_d", "period", "d"), ("k_m_s", "semi-amplitude", "m/s"))
+    ]
+    if posterior.get("rotation_period_d"):
+        named.append(("rotation", posterior["rotation_period_d"], "d"))
+    return tuple(
+        (
+            name,
+            f"{number(v['median'], 7)} {unit}",
+            f"{number(v['low'], 7)} to {number(v['high'], 7)}",
+        )
+        for name, v, unit in named
+    )
+
+
+def _posterior_note(verdict: Verdict) -> str:
+    posterior = verdict.posterior or {}
+    if "r_hat" not in posterior:
+        return ""
+    state = "converged" if posterior["converged"] else "not converged: use the errors of the fit"
+    return (
+        f"Sampling {state}: R-hat {number(posterior['r_hat'], 4)}, "
+        f"{number(posterior['effective_sample_size'], 3)} effective samples, autocorrelation time "
+        f"{number(posterior['autocorrelation_time'], 3)} steps."
+    )
 
 
 def _data_sentences(verdict: Verdict) -> tuple[str, ...]:
