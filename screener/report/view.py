@@ -37,6 +37,7 @@ DISCLAIMER = (
     "data under stated rules; it does not replace an independent analysis, further observations "
     "or the judgement of those who publish."
 )
+_FINEST = 0.001  # of log10 Z; more digits say nothing to a reader
 ALWAYS_USED = ("astropy2022", "harris2020", "virtanen2020", "hunter2007")
 
 
@@ -197,8 +198,8 @@ def _evidences(verdict: Verdict) -> tuple[tuple[str, ...], ...]:
     return tuple(
         (
             str(e["n_planets"]),
-            uncertain(e["log10_z"], e["log10_z_err"]),
-            uncertain(e["check_log10_z"], e["check_log10_z_err"]),
+            uncertain(e["log10_z"], max(e["log10_z_err"], _FINEST)),
+            uncertain(e["check_log10_z"], max(e["check_log10_z_err"], _FINEST)),
             "yes" if e["agree"] else "no",
         )
         for e in (verdict.posterior or {}).get("evidences", ())
