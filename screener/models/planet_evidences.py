@@ -19,8 +19,7 @@ from screener.models.evidence_integrals import (
     ImportanceSampler,
     JeffreysPrior,
     PlanetPrior,
-    annealed_evidence,
-    direct_evidence_without_planets,
+    check_evidence,
 )
 from screener.models.portrait import Portrait
 from screener.search.periodogram import SHORTEST_PERIOD
@@ -88,12 +87,7 @@ def planet_evidences(
     out = []
     for n in range(min(most, MOST_PLANETS) + 1):
         ours = sampler.estimate(n)
-        check = (
-            annealed_evidence(problem, n, second, _CHECK)
-            if n
-            else direct_evidence_without_planets(problem)
-        )
-        gap = abs(ours.log10_z - check.log10_z)
+        check = check_evidence(problem, n, second, _CHECK)
         out.append(
             PlanetEvidence(
                 n_planets=n,
@@ -101,7 +95,7 @@ def planet_evidences(
                 log10_z_err=ours.log10_error,
                 check_log10_z=check.log10_z,
                 check_log10_z_err=check.log10_error,
-                agree=bool(gap <= ours.log10_error + check.log10_error),
+                agree=ours.agrees_with(check),
                 converged=ours.converged and check.converged,
             )
         )

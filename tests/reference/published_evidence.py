@@ -24,13 +24,11 @@ import numpy as np
 from screener.models.evidence_integrals import (
     AnnealingEffort,
     Effort,
-    EvidenceEstimate,
     EvidenceProblem,
     ImportanceSampler,
     JeffreysPrior,
     PlanetPrior,
-    annealed_evidence,
-    direct_evidence_without_planets,
+    check_evidence,
 )
 
 __all__ = ["Record", "inside", "load_problem", "published", "run"]
@@ -112,14 +110,6 @@ def inside(n_planets: int, value: float, quartiles: tuple[float, float, float]) 
     return q25 - QUARTILE_TOLERANCE <= value <= q75 + QUARTILE_TOLERANCE
 
 
-def _second(
-    problem: EvidenceProblem, n_planets: int, rng: np.random.Generator, effort: AnnealingEffort
-) -> EvidenceEstimate:
-    if n_planets == 0:
-        return direct_evidence_without_planets(problem)
-    return annealed_evidence(problem, n_planets, rng, effort)
-
-
 def run(
     folder: Path,
     dataset: int,
@@ -157,14 +147,13 @@ def run(
             "converged": ours.converged,
         }
         if n <= check_planets:
-            second = _second(problem, n, second_rng, check_effort or AnnealingEffort())
-            gap = abs(second.log10_z - ours.log10_z)
+            second = check_evidence(problem, n, second_rng, check_effort)
             record |= {
                 "check_method": second.method,
                 "check_log10_z": second.log10_z,
                 "check_error": second.log10_error,
                 "check_seconds": second.seconds,
-                "agree": bool(gap <= second.log10_error + ours.log10_error),
+                "agree": ours.agrees_with(second),
             }
         record |= {"seconds": seconds, "cpu_seconds": time.process_time() - cpu}
         records.append(Record(**record))

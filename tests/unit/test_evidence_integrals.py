@@ -14,6 +14,7 @@ from screener.core import NumericalError
 from screener.models.evidence_integrals import (
     AnnealingEffort,
     Effort,
+    EvidenceEstimate,
     EvidenceProblem,
     ImportanceSampler,
     JeffreysPrior,
@@ -21,7 +22,6 @@ from screener.models.evidence_integrals import (
     annealed_evidence,
     direct_evidence_without_planets,
     direct_log_likelihood,
-    log_evidence,
     log_evidence_without_planets,
 )
 from screener.models.evidence_integrals.collapsed import Collapsed, width_mixture
@@ -236,7 +236,9 @@ def test_exchangeable_planets_count_both_orders() -> None:
 
 def test_same_seed_same_evidence() -> None:
     problem = _problem()
-    values = [log_evidence(problem, 1, np.random.default_rng(9)).log_z for _ in range(2)]
+    values = [
+        ImportanceSampler(problem, np.random.default_rng(9)).estimate(1).log_z for _ in range(2)
+    ]
     assert values[0] == values[1]
 
 
@@ -330,6 +332,15 @@ def test_jeffreys_prior_integrates_to_one() -> None:
     np.testing.assert_allclose(prior.value(prior.uniform(x)), x, atol=1e-12)
 
 
+def test_estimates_agree_within_the_sum_of_their_errors() -> None:
+    near = EvidenceEstimate(1, -100.0, 0.2, "one", 1.0, 1, 0.0)
+    far = EvidenceEstimate(1, -100.45, 0.2, "other", 1.0, 1, 0.0)
+    vague = EvidenceEstimate(1, -100.45, 0.3, "other", 1.0, 1, 0.0)
+    assert not near.agrees_with(far)
+    assert near.agrees_with(vague)
+    assert vague.agrees_with(near)
+
+
 def test_bad_problems_are_named() -> None:
     good = _problem()
     with pytest.raises(ValueError, match="disagree in size"):
@@ -340,8 +351,6 @@ def test_bad_problems_are_named() -> None:
         EvidenceProblem(good.time, good.rv + 5000, good.rv_err, good.covariance, good.planets)
     with pytest.raises(ValueError, match="increase"):
         PlanetPrior(5.0, 2.0)
-    with pytest.raises(ValueError, match="unknown method"):
-        log_evidence(good, 1, np.random.default_rng(0), "guess")
     with pytest.raises(NumericalError, match="positive definite"):
         log_evidence_without_planets(
             EvidenceProblem(

@@ -1,8 +1,8 @@
 """Evidences of n planets on top of correlated noise, by two methods that share no sampling.
 
 ``ImportanceSampler`` is the method of choice: all linear parameters and the jitter are integrated
-out and the rest is sampled from an adapted proposal. ``annealed_evidence`` checks it: it samples
-every parameter with the priors as stated.
+out and the rest is sampled from an adapted proposal. ``check_evidence`` is the second method:
+annealing, which samples every parameter with the priors as stated.
 """
 
 from __future__ import annotations
@@ -36,23 +36,21 @@ __all__ = [
     "JeffreysPrior",
     "PlanetPrior",
     "annealed_evidence",
+    "check_evidence",
     "direct_evidence_without_planets",
     "direct_log_likelihood",
     "importance_ladder",
-    "log_evidence",
     "log_evidence_without_planets",
 ]
 
 
-def log_evidence(
+def check_evidence(
     problem: EvidenceProblem,
     n_planets: int,
     rng: np.random.Generator,
-    method: str = "importance",
+    effort: AnnealingEffort | None = None,
 ) -> EvidenceEstimate:
-    """ln Z of one model; ``method`` is "importance" or "annealing" (one planet or more)."""
-    if method == "importance":
-        return ImportanceSampler(problem, rng).estimate(n_planets)
-    if method == "annealing":
-        return annealed_evidence(problem, n_planets, rng)
-    raise ValueError(f"unknown method {method!r}: importance or annealing")
+    """ln Z by the method that shares no sampling with ``ImportanceSampler``."""
+    if n_planets == 0:
+        return direct_evidence_without_planets(problem)
+    return annealed_evidence(problem, n_planets, rng, effort)

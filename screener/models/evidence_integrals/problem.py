@@ -201,3 +201,7 @@ class EvidenceEstimate:
     @property
     def log10_error(self) -> float:
         return self.error / LN10
+
+    def agrees_with(self, other: EvidenceEstimate) -> bool:
+        """Whether the two differ by no more than the sum of their errors."""
+        return bool(abs(self.log_z - other.log_z) <= self.error + other.error)
