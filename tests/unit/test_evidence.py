@@ -26,7 +26,7 @@ from screener.evidence import (
     run_test,
     sampling,
 )
-from screener.evidence.correlated import draw, fit_noise, whiten, zero_points
+from screener.evidence.correlated import draw, fit_alike, fit_noise, whiten, zero_points
 from screener.evidence.lines import channels_of, fit_columns, signal_columns, velocity_channel
 from screener.models.rotation import PeriodDensity
 from tests.statistical.evidence_cases import Recipe, make_case, nights
@@ -375,3 +375,14 @@ def test_the_cycle_is_found_however_long_the_baseline(seasons: int) -> None:
 
 def test_short_periods_are_not_asked() -> None:
     assert cycle.run(make_case(1)).outcome is Outcome.NOT_APPLICABLE
+
+
+def test_noise_that_is_all_but_red_is_seen_as_such() -> None:
+    """A grid of red shares that ends short of it takes a wandering signal's chances for too low."""
+    rng = np.random.default_rng(8)
+    time = np.sort(rng.uniform(0, 200, 90))
+    lag = np.abs(time[:, None] - time)
+    factor = np.linalg.cholesky(0.995 * np.exp(-lag / 12.0) + 0.005 * np.eye(90))
+    values = factor @ rng.normal(size=(90, 40))
+    _, share, _ = fit_alike(time, np.ones(90), np.ones((90, 1)), values)
+    assert np.median(share) > 0.97
